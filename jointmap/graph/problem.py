@@ -132,6 +132,19 @@ class Block:
 
 
 @dataclass(frozen=True)
+class Unusable:
+    """Rows of one table that no factor could be made of, with the reason (for the products)."""
+
+    kind: Kind
+    robot: int
+    sensor: tuple[str, ...]
+    target: tuple[str, ...]
+    t_s: Floats
+    source: Provenance
+    reason: str
+
+
+@dataclass(frozen=True)
 class Problem:
     """Everything that is measured, ready to be solved.
 
@@ -149,6 +162,7 @@ class Problem:
     blocks: tuple[Block, ...]
     dead_reckoning: Floats
     breaks: Bools
+    unusable: tuple[Unusable, ...] = ()
     notes: tuple[str, ...] = ()
 
 
