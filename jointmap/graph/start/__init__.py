@@ -1,0 +1,1 @@
+"""Start values from measurements alone: alignment, consistent sets, triangulation, chunks, team."""
