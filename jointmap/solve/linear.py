@@ -1,0 +1,96 @@
+"""Whitened linear rows -> GTSAM's linear engine, and the step it gives back.
+
+GTSAM orders and eliminates; the rows are ours, so that any measurement model, mounting, lag or
+weight is possible without a call back into Python (which GTSAM pays for with a copy of all values).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass, field
+
+import gtsam
+import numpy as np
+from numpy.typing import NDArray
+
+from jointmap.errors import IndeterminateError
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+_UNIT = {m: gtsam.noiseModel.Unit.Create(m) for m in range(1, 13)}
+
+
+@dataclass
+class Rows:
+    """Whitened rows ``A_1 d_1 + A_2 d_2 + … = rhs`` of n equal-shaped measurements.
+
+    ``keys`` is a list of (n,) arrays, ``jacobians`` of (n, m, d) arrays, ``rhs`` (n, m).
+    """
+
+    keys: list[Ints]
+    jacobians: list[Floats]
+    rhs: Floats
+
+
+@dataclass
+class LinearGraph:
+    """A GTSAM graph that is filled from arrays."""
+
+    graph: gtsam.GaussianFactorGraph = field(default_factory=gtsam.GaussianFactorGraph)
+
+    def push(self, rows: Rows) -> None:
+        """Add rows with one, two or three variables each."""
+        make, add, unit = gtsam.JacobianFactor, self.graph.push_back, _UNIT[rows.rhs.shape[1]]
+        columns: list[Iterable[object]] = []
+        for key, jacobian in zip(rows.keys, rows.jacobians, strict=True):
+            columns += [key.tolist(), list(np.ascontiguousarray(jacobian))]
+        rhs = list(np.ascontiguousarray(rows.rhs))
+        if len(rows.keys) == 1:
+            for k1, a1, b in zip(*columns, rhs, strict=True):
+                add(make(k1, a1, b, unit))
+        elif len(rows.keys) == 2:
+            for k1, a1, k2, a2, b in zip(*columns, rhs, strict=True):
+                add(make(k1, a1, k2, a2, b, unit))
+        else:
+            for k1, a1, k2, a2, k3, a3, b in zip(*columns, rhs, strict=True):
+                add(make(k1, a1, k2, a2, k3, a3, b, unit))
+
+    def damp(self, dims: Ints, strength: Floats) -> None:
+        """Add a diagonal: ``strength`` (N,) is the square root of what joins the information."""
+        start = 0
+        make, add = gtsam.JacobianFactor, self.graph.push_back
+        for key, d in enumerate(dims.tolist()):
+            add(make(key, np.diag(strength[start : start + d]), np.zeros(d), _UNIT[d]))
+            start += d
+
+
+def order(graph: LinearGraph, last: Ints) -> gtsam.Ordering:
+    """Fill-reducing ordering: nested dissection (METIS), COLAMD where the graph is small.
+
+    ``last`` keys (calibration vectors, which touch almost everything) are put at the end.
+    """
+    if graph.graph.keys().size() < 64 or len(last):
+        return gtsam.Ordering.ColamdConstrainedLastGaussianFactorGraph(
+            graph.graph, gtsam.KeyVector(last.tolist())
+        )
+    return gtsam.Ordering.MetisGaussianFactorGraph(graph.graph)
+
+
+def eliminate(graph: LinearGraph, ordering: gtsam.Ordering) -> gtsam.GaussianBayesTree:
+    """Multifrontal Cholesky.
+
+    Raises
+    ------
+    IndeterminateError
+        The system is singular; the message carries GTSAM's own hint (a key near the defect).
+    """
+    try:
+        return graph.graph.eliminateMultifrontal(ordering)
+    except RuntimeError as error:
+        raise IndeterminateError(str(error)) from error
+
+
+def step(tree: gtsam.GaussianBayesTree) -> Floats:
+    """The solution (N,) in key order."""
+    return np.asarray(tree.optimize().vector(), dtype=np.float64)

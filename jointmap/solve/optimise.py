@@ -1,0 +1,141 @@
+"""Robust Gauss-Newton with Levenberg-Marquardt damping where a step fails.
+
+Iteratively reweighted least squares (Holland & Welsch 1977): at each state the kernel's weights
+enter the linear system; GTSAM eliminates it. A step that raises the robust objective is repeated
+with Marquardt's diagonal damping (Marquardt 1963).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import gtsam
+import numpy as np
+from numpy.typing import NDArray
+
+from jointmap.graph.problem import State
+from jointmap.solve.linear import LinearGraph, eliminate, order, step
+from jointmap.solve.system import System, cost, linearise_system, retract
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+Report = Callable[[str], None]
+
+
+@dataclass(frozen=True)
+class OptimiseSettings:
+    """When to stop: relative decrease of the objective below ``relative`` in two steps running,
+    or no step of a variable above ``step`` (metres, radians); at most ``iterations``."""
+
+    iterations: int = 50
+    relative: float = 1e-7
+    step: float = 1e-7
+    first_damping: float = 1e-5
+    last_damping: float = 1e8
+
+
+@dataclass(frozen=True)
+class Optimised:
+    """Outcome: the best state, its objective, how it went, and the ordering for further use."""
+
+    state: State
+    cost: float
+    iterations: int
+    converged: bool
+    ordering: gtsam.Ordering
+    start_cost: float
+
+
+def optimise(
+    system: System,
+    start: State,
+    settings: OptimiseSettings | None = None,
+    ordering: gtsam.Ordering | None = None,
+    report: Report | None = None,
+) -> Optimised:
+    """Minimise the robust objective of a system from a start.
+
+    Raises
+    ------
+    IndeterminateError
+        The undamped system is singular at the start and damping does not mend it.
+    """
+    settings = settings or OptimiseSettings()
+    state, damping, small = start, 0.0, 0
+    first = now = np.inf
+    converged = False
+    iteration = 0
+    for iteration in range(1, settings.iterations + 1):
+        lin = linearise_system(system, state)
+        now = lin.cost
+        first = now if iteration == 1 else first
+        if ordering is None:
+            ordering = order(lin.graph, system.layout.calibration_key[system.layout.calibration_key >= 0])
+        moved, new, damping, size = _descend(system, state, lin.graph, now, ordering, damping, settings)
+        if report is not None:
+            report(f"iteration {iteration}: objective {min(new, now):.6g}")
+        if moved is None:
+            # No damping helps any more: a stationary point up to rounding, or a failure.
+            converged = size < 1e3 * settings.step or now < 1e-12
+            break
+        state = moved
+        small = small + 1 if now - new <= settings.relative * (now + 1e-12) else 0
+        now = new
+        if size < settings.step or (small >= 2) or (small >= 1 and damping == 0.0):
+            converged = True
+            break
+    assert ordering is not None
+    return Optimised(state, now, iteration, converged, ordering, first)
+
+
+def _descend(
+    system: System,
+    state: State,
+    graph: LinearGraph,
+    now: float,
+    ordering: gtsam.Ordering,
+    damping: float,
+    settings: OptimiseSettings,
+) -> tuple[State | None, float, float, float]:
+    """One accepted step: new state, its objective, the damping to go on with, largest move."""
+    diagonal: Floats | None = None
+    size = np.inf
+    while True:
+        used = graph
+        if damping > 0.0:
+            if diagonal is None:
+                diagonal = hessian_diagonal(graph, system.layout.offset[-1])
+            used = LinearGraph(gtsam.GaussianFactorGraph())
+            used.graph.push_back(graph.graph)
+            used.damp(system.layout.dims, np.sqrt(damping * diagonal))
+        try:
+            delta = step(eliminate(used, ordering))
+            ok = bool(np.isfinite(delta).all())
+        except Exception:
+            if damping >= 1e-2:
+                raise
+            ok = False
+        if ok:
+            size = float(np.abs(delta).max(initial=0.0))
+            moved = retract(system, state, delta)
+            new = cost(system, moved)
+            if new <= now * (1 + 1e-12) + 1e-12:
+                smaller = damping * 0.1
+                return moved, new, 0.0 if smaller < settings.first_damping else smaller, size
+        damping = max(damping * 10.0, settings.first_damping)
+        if damping > settings.last_damping or size < 1e-12:
+            return None, now, damping, size
+
+
+def hessian_diagonal(graph: LinearGraph, n: int) -> Floats:
+    """Diagonal (n,) of the information matrix, lifted where it is almost nothing."""
+    _, j, value = _triplets(graph)
+    out = np.bincount(j, weights=value**2, minlength=n + 1)[:n]
+    return np.asarray(np.maximum(out, 1e-6 * max(float(np.median(out)), 1e-12)))
+
+
+def _triplets(graph: LinearGraph) -> tuple[Ints, Ints, Floats]:
+    i, j, value = np.asarray(graph.graph.sparseJacobian_())
+    return i.astype(np.int64) - 1, j.astype(np.int64) - 1, value

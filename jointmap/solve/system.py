@@ -1,0 +1,298 @@
+"""The nonlinear least-squares system of a problem under one set of decisions.
+
+Decisions are: which landmark each track is (assignment), which rows are used, how residuals are
+whitened and which kernel each block has. The system evaluates residuals and linearises them at a
+state; it never changes.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, fields, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from jointmap import frames
+from jointmap.graph.models import Linearised, linearise_block
+from jointmap.graph.problem import Assignment, Block, Problem, State
+from jointmap.ingest.survey import Provenance
+from jointmap.solve.gauge import Gauge, components, make_gauge, motion_basis, point_motion, pose_motion
+from jointmap.solve.kernels import Kernel
+from jointmap.solve.layout import Layout, landmark_of_rows, make_layout, oriented_landmarks
+from jointmap.solve.linear import LinearGraph, Rows
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+#: Prior standard deviations of the odometry calibration: translation scale, turn scale, lag in s.
+CALIBRATION_PRIOR = np.array([0.2, 0.2, 0.5])
+#: A redescending kernel never weighs a row below this, so that no chain is ever cut in two.
+WEIGHT_FLOOR = 1e-7
+
+
+def take_rows(block: Block, rows: Bools | Ints) -> Block:
+    """Some rows of a block."""
+    n = block.n
+    changed: dict[str, object] = {}
+    for f in fields(block):
+        value = getattr(block, f.name)
+        if isinstance(value, np.ndarray) and value.ndim and len(value) == n and n != 1:
+            changed[f.name] = value[rows]
+        elif isinstance(value, np.ndarray) and n == 1 and f.name not in ("frame_a", "frame_b"):
+            changed[f.name] = value[rows]
+    s = block.source
+    changed["source"] = Provenance(s.files, s.file[rows], s.row[rows])
+    return replace(block, **changed)  # type: ignore[arg-type]
+
+
+@dataclass(frozen=True)
+class Part:
+    """The used rows of one block: ``index`` (n,) into the whole block, whitening (n, m, m)."""
+
+    block: Block
+    index: Ints
+    whiten: Floats
+    kernel: Kernel | None
+    key_a: Ints
+    key_b: Ints
+    landmark: Ints | None
+
+
+@dataclass(frozen=True)
+class System:
+    """Everything that :func:`jointmap.solve.optimise.optimise` needs besides a start."""
+
+    problem: Problem
+    assignment: Assignment
+    layout: Layout
+    oriented: Bools
+    parts: tuple[Part, ...]
+    component: Ints
+    sensitivity: Mapping[int, Floats] = field(default_factory=dict)
+    calibration_offset: Floats = field(default_factory=lambda: np.zeros((0, 3)))
+    calibration_prior: Floats = field(default_factory=lambda: CALIBRATION_PRIOR)
+
+
+def make_system(
+    problem: Problem,
+    assignment: Assignment,
+    used: tuple[Bools, ...],
+    whiten: tuple[Floats, ...],
+    kernels: tuple[Kernel | None, ...],
+    sensitivity: Mapping[int, Floats] | None = None,
+    calibration_offset: Floats | None = None,
+) -> System:
+    """Assemble a system.
+
+    Parameters
+    ----------
+    used : per block (n,) bool
+    whiten : per block (n, m, m) as :func:`jointmap.graph.noise.whitening`
+    kernels : per block, None for plain least squares
+    sensitivity : robot -> (rows of its odometry block, dof, 3) derivative of the increment by
+        translation scale, turn scale and lag; robots in it get a calibration vector
+    calibration_offset : (R, 3) present calibration minus its prior mean
+    """
+    sensitivity = sensitivity or {}
+    calibrated = np.zeros(len(problem.robots), dtype=bool)
+    calibrated[list(sensitivity)] = True
+    layout = make_layout(problem, assignment, used, calibrated)
+    parts = []
+    for block, rows, w, kernel in zip(problem.blocks, used, whiten, kernels, strict=True):
+        keep = rows
+        landmark = None
+        if block.kind in ("sighting", "control"):
+            landmark = landmark_of_rows(block, assignment)
+            keep = rows & (layout.key_of_landmark[landmark] >= 0)
+        if not keep.any():
+            continue
+        index = np.flatnonzero(keep)
+        whole = len(index) == block.n
+        sub = block if whole else take_rows(block, index)
+        landmark = None if landmark is None else landmark[index]
+        key_b = sub.b if landmark is None else layout.key_of_landmark[landmark]
+        parts.append(Part(sub, index, w if whole else w[index], kernel, sub.a, key_b, landmark))
+    pairs = [(p.key_a, p.key_b) for p in parts if p.block.kind not in ("fix", "gravity", "control")]
+    n_tied = layout.n - int(calibrated.sum())
+    return System(
+        problem,
+        assignment,
+        layout,
+        oriented_landmarks(problem, assignment),
+        tuple(parts),
+        components(n_tied, pairs),
+        sensitivity,
+        np.zeros((len(problem.robots), 3)) if calibration_offset is None else calibration_offset,
+    )
+
+
+def linearise(system: System, part: Part, state: State, *, jacobians: bool = True) -> Linearised:
+    """Unwhitened residual and Jacobians of a part at a state, calibration step included."""
+    lin = linearise_block(
+        frames.group(system.problem.dimension),
+        part.block,
+        state.poses,
+        state.landmarks,
+        state.orientations,
+        system.assignment.landmark,
+        system.oriented,
+        jacobians=jacobians,
+    )
+    if part.block.kind == "odometry" and part.block.robot in system.sensitivity:
+        shift = system.sensitivity[part.block.robot][part.index] @ calibration_step(
+            system, state, part.block.robot
+        )
+        lin = replace(lin, residual=lin.residual - shift)
+    return lin
+
+
+def calibration_step(system: System, state: State, robot: int) -> Floats:
+    """Change (3,) of a robot's odometry calibration since its odometry was integrated."""
+    name = system.problem.robots[robot]
+    return np.array(
+        [
+            state.calibration.get((name, "", p), 0.0)
+            for p in ("odometry_scale", "odometry_turn_scale", "odometry_lag_s")
+        ]
+    )
+
+
+def whitened_norm(whitened: Floats) -> Floats:
+    """Norm (n,) of whitened residuals (n, m)."""
+    return np.sqrt(np.einsum("nm,nm->n", whitened, whitened))
+
+
+def whitened_residual(system: System, part: Part, state: State) -> Floats:
+    """Whitened residual (n, m) of a part."""
+    lin = linearise(system, part, state, jacobians=False)
+    return np.asarray((part.whiten @ lin.residual[:, :, None])[:, :, 0])
+
+
+def cost(system: System, state: State) -> float:
+    """Half the robust objective: sum of rho over rows, plus the calibration priors."""
+    total = 0.0
+    for part in system.parts:
+        norm = whitened_norm(whitened_residual(system, part, state))
+        if part.kernel is None:
+            total += 0.5 * float(norm @ norm)
+        else:
+            total += float(part.kernel.loss(norm, part.whiten.shape[1]).sum())
+    for robot in system.sensitivity:
+        v = _prior_residual(system, state, robot)
+        total += 0.5 * float(v @ v)
+    return total
+
+
+def _prior_residual(system: System, state: State, robot: int) -> Floats:
+    now = system.calibration_offset[robot] + calibration_step(system, state, robot)
+    return now / system.calibration_prior
+
+
+@dataclass(frozen=True)
+class LinearisedSystem:
+    """A GTSAM linear graph at a state, with the cost there and the weights that entered."""
+
+    graph: LinearGraph
+    gauge: Gauge
+    cost: float
+    weights: tuple[Floats, ...]
+
+
+def part_rows(system: System, part: Part, state: State, weight: Floats | None = None) -> tuple[Rows, Floats]:
+    """Whitened (and weighted) rows of a part, and the whitened residual (n, m) before weighting."""
+    lin = linearise(system, part, state)
+    w = part.whiten
+    residual = (w @ lin.residual[:, :, None])[:, :, 0]
+    if weight is not None:
+        w = w * np.sqrt(weight)[:, None, None]
+    keys, jacobians = [], []
+    if lin.jac_a is not None and part.block.kind != "control":
+        keys.append(part.key_a)
+        jacobians.append(w @ lin.jac_a)
+    if lin.jac_b is not None and (part.key_b >= 0).all():
+        keys.append(part.key_b)
+        jacobians.append(w @ lin.jac_b)
+    if part.block.kind == "odometry" and part.block.robot in system.sensitivity:
+        key = system.layout.calibration_key[part.block.robot]
+        keys.append(np.full(len(part.index), key))
+        jacobians.append(-(w @ system.sensitivity[part.block.robot][part.index]))
+    rhs = -residual if weight is None else -residual * np.sqrt(weight)[:, None]
+    return Rows(keys, jacobians, rhs), residual
+
+
+def linearise_system(system: System, state: State) -> LinearisedSystem:
+    """Linearise every part with the kernels' weights at the state, and hold the gauge."""
+    graph = LinearGraph()
+    total, weights = 0.0, []
+    absolute: list[tuple[Ints, Floats]] = []
+    for part in system.parts:
+        weight = None
+        if part.kernel is not None:
+            norm = whitened_norm(whitened_residual(system, part, state))
+            m = part.whiten.shape[1]
+            weight = np.maximum(part.kernel.weight(norm, m), WEIGHT_FLOOR)
+            total += float(part.kernel.loss(norm, m).sum())
+        rows, residual = part_rows(system, part, state, weight)
+        if part.kernel is None:
+            total += 0.5 * float(np.einsum("nm,nm->", residual, residual))
+        graph.push(rows)
+        weights.append(np.ones(len(part.index)) if weight is None else weight)
+        if part.block.kind in ("fix", "control"):
+            absolute.append(_absolute_motion(system, part, state, rows))
+    for robot in system.sensitivity:
+        v = _prior_residual(system, state, robot)
+        total += 0.5 * float(v @ v)
+        key = np.array([system.layout.calibration_key[robot]])
+        graph.push(Rows([key], [np.diag(1.0 / system.calibration_prior)[None]], -v[None]))
+    k = system.layout.n_keyframes
+    gauge = make_gauge(system.problem, state.poses[:k], system.component, absolute)
+    for hold in gauge.rows:
+        graph.push(hold)
+    return LinearisedSystem(graph, gauge, total, tuple(weights))
+
+
+def _absolute_motion(system: System, part: Part, state: State, rows: Rows) -> tuple[Ints, Floats]:
+    basis = motion_basis(system.problem.dimension, system.problem.gravity_aligned)
+    key = rows.keys[0]
+    if part.landmark is None:
+        motion = pose_motion(system.problem.dimension, state.poses[part.key_a], basis)
+    else:
+        motion = point_motion(system.problem.dimension, state.landmarks[part.landmark], basis)
+        if rows.jacobians[0].shape[2] != motion.shape[1]:
+            turn = np.zeros((len(motion), rows.jacobians[0].shape[2] - motion.shape[1], motion.shape[2]))
+            motion = np.concatenate([turn, motion] if system.problem.dimension == 3 else [motion, turn], axis=1)
+    product = rows.jacobians[0] @ motion
+    component = np.repeat(system.component[key], product.shape[1])
+    return component, product.reshape(-1, basis.shape[1])
+
+
+def retract(system: System, state: State, delta: Floats) -> State:
+    """Move a state by a step (N,) in key order."""
+    layout, dim = system.layout, system.problem.dimension
+    group = frames.group(dim)
+    k = layout.n_keyframes
+    dof = group.dof
+    poses = group.retract(state.poses[:k], delta[: k * dof].reshape(k, dof))
+    landmarks = state.landmarks.copy()
+    orientations = None if state.orientations is None else state.orientations.copy()
+    oriented = system.oriented[layout.landmark_of_key]
+    start = layout.offset[k : k + len(oriented)]
+    point, pose = layout.landmark_of_key[~oriented], layout.landmark_of_key[oriented]
+    landmarks[point] += delta[start[~oriented][:, None] + np.arange(dim)]
+    if len(pose):
+        assert orientations is not None
+        moved = group.retract(
+            group.build(orientations[pose], landmarks[pose]),
+            delta[start[oriented][:, None] + np.arange(dof)],
+        )
+        landmarks[pose] = group.translation(moved)
+        orientations[pose] = group.rotation(moved)
+    calibration = dict(state.calibration)
+    for robot in system.sensitivity:
+        at = layout.offset[layout.calibration_key[robot]]
+        name = system.problem.robots[robot]
+        for i, p in enumerate(("odometry_scale", "odometry_turn_scale", "odometry_lag_s")):
+            calibration[(name, "", p)] = calibration.get((name, "", p), 0.0) + float(delta[at + i])
+    return State(poses, landmarks, orientations, calibration)
