@@ -28,7 +28,9 @@ HORN_Q = np.array(
 
 def test_umeyama_similarity() -> None:
     fit = align(UMEYAMA_A, UMEYAMA_B, form="planar", with_scale=True)
-    assert fit.rotation == pytest.approx(np.array([[0.83205, 0.5547], [-0.5547, 0.83205]]), abs=1e-5)
+    assert fit.rotation == pytest.approx(
+        np.array([[0.83205, 0.5547], [-0.5547, 0.83205]]), abs=1e-5
+    )
     assert fit.translation == pytest.approx([-0.8, 0.4], abs=1e-12)
     assert float(fit.scale) == pytest.approx(0.721110, abs=1e-6)
     assert float(fit.mean_square) == pytest.approx(8.0 / 15.0, abs=1e-12)

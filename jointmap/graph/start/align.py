@@ -202,9 +202,7 @@ def _full_rotation(cross: Floats) -> Floats:
 
 
 def _yaw(cross: Floats) -> Floats:
-    return np.arctan2(
-        cross[..., 0, 1] - cross[..., 1, 0], cross[..., 0, 0] + cross[..., 1, 1]
-    )
+    return np.arctan2(cross[..., 0, 1] - cross[..., 1, 0], cross[..., 0, 0] + cross[..., 1, 1])
 
 
 def _point_information(points: Floats, form: Form) -> Floats:
@@ -225,7 +223,8 @@ def _degenerate(centred: Floats, weights: Floats, form: Form) -> Bools:
 
 
 def _linear_part(step: Floats, dimension: int) -> Floats:
-    return np.asarray(step[:2] if dimension == 2 else step[3:])
+    part: Floats = step[:2] if dimension == 2 else step[3:]
+    return part
 
 
 def _rotation_of(step: Floats, dimension: int) -> Floats:
