@@ -190,7 +190,7 @@ def masked_inverse(information: Floats, form: Form) -> Floats:
     inverse = np.zeros_like(information)
     block = np.linalg.pinv(information[..., free[:, None], free], rcond=1e-14, hermitian=True)
     inverse[..., free[:, None], free] = block
-    return inverse
+    return np.asarray(inverse)
 
 
 def _full_rotation(cross: Floats) -> Floats:
@@ -198,7 +198,7 @@ def _full_rotation(cross: Floats) -> Floats:
     sign = np.linalg.det(np.einsum("...ji,...kj->...ik", vt, u))
     vt = vt.copy()
     vt[..., -1, :] *= np.where(sign < 0.0, -1.0, 1.0)[..., None]
-    return np.einsum("...ji,...kj->...ik", vt, u)
+    return np.asarray(np.einsum("...ji,...kj->...ik", vt, u))
 
 
 def _yaw(cross: Floats) -> Floats:
@@ -223,8 +223,7 @@ def _degenerate(centred: Floats, weights: Floats, form: Form) -> Bools:
 
 
 def _linear_part(step: Floats, dimension: int) -> Floats:
-    part: Floats = step[:2] if dimension == 2 else step[3:]
-    return part
+    return np.array(step[:2] if dimension == 2 else step[3:])
 
 
 def _rotation_of(step: Floats, dimension: int) -> Floats:

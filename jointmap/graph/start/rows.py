@@ -1,0 +1,89 @@
+"""Sightings as flat arrays, their residuals, and sums over groups."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+#: Order of the components in ``SightingRows.value``.
+COMPONENTS = ("bearing_rad", "elevation_rad", "range_m", "x_m", "y_m", "z_m")
+#: Scale of the robust cost per residual component (Cauchy constant for 95 % efficiency, squared;
+#: P. W. Holland & R. E. Welsch, Comm. Statist. A6, 1977).
+CAUCHY2 = 2.3849**2
+
+
+@dataclass(frozen=True)
+class SightingRows:
+    """Sightings as flat arrays.
+
+    ``group`` (n,) which landmark; ``origin`` (n, d), ``rotation`` (n, d, d) of the sensor in the
+    frame of the result; ``value``, ``sigma`` (n, 6) by COMPONENTS, NaN where not observed.
+    """
+
+    group: Ints
+    origin: Floats
+    rotation: Floats
+    value: Floats
+    sigma: Floats
+
+    def take(self, index: Ints) -> SightingRows:
+        """Some of the rows."""
+        return SightingRows(
+            self.group[index],
+            self.origin[index],
+            self.rotation[index],
+            self.value[index],
+            self.sigma[index],
+        )
+
+
+def residuals(rows: SightingRows, points: Floats) -> tuple[Floats, Floats]:
+    """Normalised residuals (n, 6) and Jacobians (n, 6, d) by the points (n, d); absent: zero."""
+    d = points.shape[1]
+    local = np.einsum("nji,nj->ni", rows.rotation, points - rows.origin)
+    x, y = local[:, 0], local[:, 1]
+    z = local[:, 2] if d == 3 else np.zeros_like(x)
+    flat2 = np.maximum(x**2 + y**2, 1e-12)
+    flat, full2 = np.sqrt(flat2), flat2 + z**2
+    full = np.sqrt(full2)
+    residual = np.stack([np.arctan2(y, x), np.arctan2(z, flat), full, x, y, z], axis=1) - rows.value
+    residual[:, :2] = np.remainder(residual[:, :2] + np.pi, 2.0 * np.pi) - np.pi
+    by_local = np.zeros((len(x), 6, 3))
+    by_local[:, 0, 0], by_local[:, 0, 1] = -y / flat2, x / flat2
+    by_local[:, 1, 0], by_local[:, 1, 1] = -x * z / (flat * full2), -y * z / (flat * full2)
+    by_local[:, 1, 2] = flat / full2
+    by_local[:, 2] = np.stack([x, y, z], axis=1) / full[:, None]
+    by_local[:, [3, 4, 5], [0, 1, 2]] = 1.0
+    seen = np.isfinite(rows.value)
+    if d == 2:
+        seen[:, [1, 5]] = False
+    scale = np.where(seen, 1.0 / np.where(seen, rows.sigma, 1.0), 0.0)
+    jacobian = np.einsum("nki,nji->nkj", by_local[:, :, :d], rows.rotation) * scale[:, :, None]
+    return np.where(seen, residual, 0.0) * scale, jacobian
+
+
+def robust_cost(rows: SightingRows, points: Floats) -> Floats:
+    """Cost (n,) of each row at a point (n, d): c m log(1 + s / (c m)), m components."""
+    residual, _ = residuals(rows, points)
+    limit = CAUCHY2 * np.maximum(np.isfinite(rows.value).sum(axis=1), 1)
+    return np.asarray(limit * np.log1p(np.sum(residual**2, axis=1) / limit))
+
+
+def cauchy_weight(rows: SightingRows, residual: Floats) -> Floats:
+    """Weight (n,) of rows that matches the robust cost, from their normalised residuals (n, 6)."""
+    limit = CAUCHY2 * np.maximum(np.isfinite(rows.value).sum(axis=1), 1)
+    return np.asarray(1.0 / (1.0 + np.sum(residual**2, axis=1) / limit))
+
+
+def sum_by_group(group: Ints, values: Floats, groups: int) -> Floats:
+    """Sum values (n, ...) over groups: (groups, ...)."""
+    flat = values.reshape(len(values), -1)
+    total = np.stack(
+        [np.bincount(group, weights=column, minlength=groups) for column in flat.T], axis=1
+    )
+    return np.asarray(total.reshape(groups, *values.shape[1:]))
