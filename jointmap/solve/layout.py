@@ -48,6 +48,8 @@ def oriented_landmarks(problem: Problem, assignment: Assignment) -> Bools:
     """Which landmark variables (L,) are poses: those of a track seen with orientation."""
     out = np.zeros(n_landmarks(problem), dtype=bool)
     np.logical_or.at(out, assignment.landmark, problem.tracks.oriented)
+    claimed = problem.tracks.claim >= 0
+    np.logical_or.at(out, problem.tracks.claim[claimed], problem.tracks.oriented[claimed])
     return out
 
 
@@ -59,15 +61,23 @@ def landmark_of_rows(block: Block, assignment: Assignment) -> Ints:
 
 
 def make_layout(
-    problem: Problem, assignment: Assignment, used: tuple[Bools, ...], calibrated: Bools
+    problem: Problem,
+    assignment: Assignment,
+    used: tuple[Bools, ...],
+    calibrated: Bools,
+    links: Ints,
 ) -> Layout:
-    """Number the variables that the used rows involve (control points alone do not make one)."""
+    """Number the variables that the used rows involve (control points alone do not make one).
+
+    ``links`` are tracks whose own landmark is tied to the shared one by a factor.
+    """
     dof = 3 if problem.dimension == 2 else 6
     k = len(problem.keyframes.t_s)
     active = np.zeros(n_landmarks(problem), dtype=bool)
     for block, rows in zip(problem.blocks, used, strict=True):
         if block.kind == "sighting":
             active[assignment.landmark[block.b[rows]]] = True
+    active[problem.tracks.claim[links]] = True
     index = np.flatnonzero(active)
     key = np.full(len(active), -1, dtype=np.int64)
     key[index] = k + np.arange(len(index))

@@ -61,6 +61,20 @@ class Part:
 
 
 @dataclass(frozen=True)
+class Links:
+    """Associations as factors: the landmark of a track equals the shared one it claims.
+
+    ``track`` (n,), ``own`` and ``shared`` (n,) landmark variables, ``sigma`` in metres: small, so
+    that the factor says "the same", and the redundancy of the factor tests exactly that.
+    """
+
+    track: Ints
+    own: Ints
+    shared: Ints
+    sigma: float
+
+
+@dataclass(frozen=True)
 class System:
     """Everything that :func:`jointmap.solve.optimise.optimise` needs besides a start."""
 
@@ -70,6 +84,7 @@ class System:
     oriented: Bools
     parts: tuple[Part, ...]
     component: Ints
+    links: Links
     sensitivity: Mapping[int, Floats] = field(default_factory=dict)
     calibration_offset: Floats = field(default_factory=lambda: np.zeros((0, 3)))
     calibration_prior: Floats = field(default_factory=lambda: CALIBRATION_PRIOR)
@@ -83,6 +98,8 @@ def make_system(
     kernels: tuple[Kernel | None, ...],
     sensitivity: Mapping[int, Floats] | None = None,
     calibration_offset: Floats | None = None,
+    links: Ints | None = None,
+    link_sigma: float = 1e-3,
 ) -> System:
     """Assemble a system.
 
@@ -94,11 +111,14 @@ def make_system(
     sensitivity : robot -> (rows of its odometry block, dof, 3) derivative of the increment by
         translation scale, turn scale and lag; robots in it get a calibration vector
     calibration_offset : (R, 3) present calibration minus its prior mean
+    links : (k,) tracks whose own landmark is tied to the shared one that they claim
     """
+    links = np.zeros(0, dtype=np.int64) if links is None else links
     sensitivity = sensitivity or {}
     calibrated = np.zeros(len(problem.robots), dtype=bool)
     calibrated[list(sensitivity)] = True
-    layout = make_layout(problem, assignment, used, calibrated)
+    layout = make_layout(problem, assignment, used, calibrated, links)
+    tied = Links(links, assignment.landmark[links], problem.tracks.claim[links], link_sigma)
     parts = []
     for block, rows, w, kernel in zip(problem.blocks, used, whiten, kernels, strict=True):
         keep = rows
@@ -115,6 +135,7 @@ def make_system(
         key_b = sub.b if landmark is None else layout.key_of_landmark[landmark]
         parts.append(Part(sub, index, w if whole else w[index], kernel, sub.a, key_b, landmark))
     pairs = [(p.key_a, p.key_b) for p in parts if p.block.kind not in ("fix", "gravity", "control")]
+    pairs.append((layout.key_of_landmark[tied.own], layout.key_of_landmark[tied.shared]))
     n_tied = layout.n - int(calibrated.sum())
     return System(
         problem,
@@ -123,6 +144,7 @@ def make_system(
         oriented_landmarks(problem, assignment),
         tuple(parts),
         components(n_tied, pairs),
+        tied,
         sensitivity,
         np.zeros((len(problem.robots), 3)) if calibration_offset is None else calibration_offset,
     )
@@ -179,10 +201,44 @@ def cost(system: System, state: State) -> float:
             total += 0.5 * float(norm @ norm)
         else:
             total += float(part.kernel.loss(norm, part.whiten.shape[1]).sum())
+    gap = link_residual(system, state)
+    total += 0.5 * float(np.einsum("nm,nm->", gap, gap))
     for robot in system.sensitivity:
         v = _prior_residual(system, state, robot)
         total += 0.5 * float(v @ v)
     return total
+
+
+def link_residual(system: System, state: State) -> Floats:
+    """Whitened difference (n, dim) between each linked track's landmark and the shared one."""
+    links = system.links
+    return np.asarray((state.landmarks[links.own] - state.landmarks[links.shared]) / links.sigma)
+
+
+def link_rows(system: System, state: State) -> list[Rows]:
+    """Rows of the links; an oriented landmark is tied by its position."""
+    links, layout, dim = system.links, system.layout, system.problem.dimension
+    if not len(links.track):
+        return []
+    residual = link_residual(system, state)
+    out = []
+    oriented = system.oriented[links.shared]
+    for poses in (False, True):
+        rows = np.flatnonzero(oriented == poses)
+        if not len(rows):
+            continue
+        keys = [layout.key_of_landmark[links.own[rows]], layout.key_of_landmark[links.shared[rows]]]
+        sides = []
+        for sign, landmark in ((1.0, links.own[rows]), (-1.0, links.shared[rows])):
+            block = np.broadcast_to(np.eye(dim), (len(rows), dim, dim))
+            if poses:
+                assert state.orientations is not None
+                turn = state.orientations[landmark]
+                zero = np.zeros((len(rows), dim, 1 if dim == 2 else 3))
+                block = np.concatenate([turn, zero] if dim == 2 else [zero, turn], axis=2)
+            sides.append(sign * block / links.sigma)
+        out.append(Rows(keys, sides, -residual[rows]))
+    return out
 
 
 def _prior_residual(system: System, state: State, robot: int) -> Floats:
@@ -241,6 +297,9 @@ def linearise_system(system: System, state: State) -> LinearisedSystem:
         weights.append(np.ones(len(part.index)) if weight is None else weight)
         if part.block.kind in ("fix", "control"):
             absolute.append(_absolute_motion(system, part, state, rows))
+    for rows in link_rows(system, state):
+        graph.push(rows)
+        total += 0.5 * float(np.einsum("nm,nm->", rows.rhs, rows.rhs))
     for robot in system.sensitivity:
         v = _prior_residual(system, state, robot)
         total += 0.5 * float(v @ v)
@@ -261,8 +320,14 @@ def _absolute_motion(system: System, part: Part, state: State, rows: Rows) -> tu
     else:
         motion = point_motion(system.problem.dimension, state.landmarks[part.landmark], basis)
         if rows.jacobians[0].shape[2] != motion.shape[1]:
-            turn = np.zeros((len(motion), rows.jacobians[0].shape[2] - motion.shape[1], motion.shape[2]))
-            motion = np.concatenate([turn, motion] if system.problem.dimension == 3 else [motion, turn], axis=1)
+            assert state.orientations is not None
+            motion = pose_motion(
+                system.problem.dimension,
+                frames.group(system.problem.dimension).build(
+                    state.orientations[part.landmark], state.landmarks[part.landmark]
+                ),
+                basis,
+            )
     product = rows.jacobians[0] @ motion
     component = np.repeat(system.component[key], product.shape[1])
     return component, product.reshape(-1, basis.shape[1])

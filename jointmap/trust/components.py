@@ -1,0 +1,102 @@
+"""Variance components of the noise terms, robustly and from redundancy.
+
+The covariance of each residual block is ``C = sum_k theta_k^2 V_k``. Restricted maximum likelihood
+gives for every term (Koch 1986; Foerstner 1979 for one shape per group)
+
+    sum w^T S_k w = sum tr(R S_k),   S_k = W V_k W^T,
+
+with the whitened residuals w and their redundancy matrices R. The terms are updated by the ratio
+of the two sides until it is one; at the fixed point this is the Helmert/REML estimate. Gross errors
+are kept out by a gate on ``T = w^T R^+ w``; what the gate cuts from good measurements is put back
+by the truncation factor of the chi-square distribution (F_{d+2}(g) / F_d(g)).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.stats import chi2
+
+from jointmap.graph.noise import DEFAULT_SIGMA, FLOOR_SHARE, Noise, NoiseTerm, term_shapes, with_value
+from jointmap.graph.problem import Problem
+from jointmap.solve.system import Part, System
+from jointmap.trust.quality import PartQuality, Quality
+
+Floats = NDArray[np.float64]
+
+#: Below this redundancy a term keeps its prior (CHECKS 2c: the band of s^2 is then 0.3 to 2).
+LEAST_REDUNDANCY = 10.0
+#: Share of good measurements that the gate lets pass.
+GATE = 0.99
+#: One update changes a sigma by at most this factor.
+LARGEST_STEP = 4.0
+
+
+@dataclass
+class _Sum:
+    term: NoiseTerm
+    seen: float = 0.0
+    expected: float = 0.0
+    redundancy: float = 0.0
+
+
+def truncation_factor(dof: Floats, gate: float = GATE) -> Floats:
+    """Second moment of a gated Gaussian residual over that of an ungated one (CHECKS D4)."""
+    limit = chi2.ppf(gate, np.maximum(dof, 1))
+    return np.asarray(chi2.cdf(limit, np.maximum(dof, 1) + 2) / gate)
+
+
+def update_noise(problem: Problem, noise: Noise, system: System, quality: Quality) -> tuple[Noise, float]:
+    """One update of every free term.
+
+    Returns
+    -------
+    noise : with the new values; terms with too little redundancy keep theirs
+    change : largest ratio of change of a sigma that is well determined
+    """
+    sums: dict[tuple[str, str, str, str], _Sum] = {}
+    for part, stats in zip(system.parts, quality.parts, strict=True):
+        _add(sums, problem, noise, part, stats)
+    changed, largest = [], 1.0
+    for key, total in sums.items():
+        if total.redundancy < LEAST_REDUNDANCY or total.expected <= 0.0:
+            continue
+        ratio = float(np.clip(np.sqrt(total.seen / total.expected), 1 / LARGEST_STEP, LARGEST_STEP))
+        floor = FLOOR_SHARE * DEFAULT_SIGMA.get(key[3] if key[2] == "odometry" else key[2], 1.0)
+        value = max(total.term.value * ratio, floor)
+        if value > 3 * floor:
+            largest = max(largest, ratio, 1 / ratio)
+        sigma = value / np.sqrt(2.0 * total.redundancy)
+        changed.append(with_value(total.term, value, sigma, total.redundancy))
+    return noise.updated(changed), largest
+
+
+def _add(
+    sums: dict[tuple[str, str, str, str], _Sum],
+    problem: Problem,
+    noise: Noise,
+    part: Part,
+    stats: PartQuality,
+) -> None:
+    block = part.block
+    terms, shapes, _ = term_shapes(block, problem, noise)
+    if not any(t.free for t in terms):
+        return
+    t, dof = stats.statistic()
+    inside = (dof > 0) & (t <= chi2.ppf(GATE, np.maximum(dof, 1)))
+    factor = truncation_factor(dof)
+    w = part.whiten
+    for term, shape in zip(terms, shapes, strict=True):
+        if not term.free:
+            continue
+        s = w @ shape @ np.swapaxes(w, 1, 2)
+        seen = np.einsum("ni,nij,nj->n", stats.whitened, s, stats.whitened) / factor
+        # A row's share in the term: how much of its variance the term makes, times its redundancy.
+        expected = np.einsum("nij,nji->n", stats.redundancy, s)
+        total = sums.setdefault(term.key, _Sum(term))
+        total.seen += float(seen[inside].sum())
+        total.expected += float(expected[inside].sum())
+        total.redundancy += term.value**2 * float(expected[inside].sum())
+
