@@ -5,7 +5,7 @@ disk, and then swapped in:
 
 1. rename ``result`` to ``.result.old`` (when replacing),
 2. rename ``.result.new`` to ``result``,
-3. remove ``.result.old``.
+3. rename ``.result.old`` to ``.result.gone`` and remove that.
 
 Whatever the moment of a break, what lies there tells how far it came (:func:`recover`):
 
@@ -14,9 +14,11 @@ Whatever the moment of a break, what lies there tells how far it came (:func:`re
 ===========  =================  =================  =====================================
 any          there              absent             broken while writing: remove the new
 absent       there              there              between 1 and 2: rename the new in
-there        absent             there              broken in 3: remove the old
+there        absent             there              before 3: remove the old
 absent       absent             there              undo 1: rename the old back
 ===========  =================  =================  =====================================
+
+``.result.gone`` may be half removed, therefore it has a name of its own and never comes back.
 
 The lock is an advisory one of the operating system: it ends with its process, so that a killed
 writer blocks nobody. Its file ``.result.lock`` is removed with the last writer or by recovery.
@@ -115,7 +117,7 @@ def recover(path: Path | str) -> str | None:
         belong to a program that is still writing.
     """
     target = Path(os.path.realpath(path))
-    traces = [_sibling(target, kind) for kind in ("new", "old", "lock")]
+    traces = [_sibling(target, kind) for kind in ("new", "old", "gone", "lock")]
     if not any(os.path.lexists(p) for p in traces):
         return None
     try:
@@ -156,8 +158,7 @@ def _swap(target: Path) -> None:
         _flush(target.parent)
     os.rename(new, target)
     _flush(target.parent)
-    if old.exists():
-        shutil.rmtree(old)
+    _discard(target, old)
 
 
 def _settle(target: Path) -> str | None:
@@ -173,12 +174,22 @@ def _settle(target: Path) -> str | None:
         _flush(target.parent)
         done = f"put back the earlier {target} after an interrupted replacement"
     if new.exists():
-        shutil.rmtree(new)
+        _discard(target, new)
         done = f"removed what an interrupted program had begun to write for {target}"
-    if old.exists():
-        shutil.rmtree(old)
+    if old.exists() or _sibling(target, "gone").exists():
+        _discard(target, old)
         done = done or f"removed the earlier {target} after an interrupted replacement"
     return done
+
+
+def _discard(target: Path, folder: Path) -> None:
+    """Remove a sibling; a name of its own keeps a half removed folder from being taken for whole."""
+    gone = _sibling(target, "gone")
+    if gone.exists():
+        shutil.rmtree(gone)
+    if folder.exists():
+        os.rename(folder, gone)
+        shutil.rmtree(gone)
 
 
 @contextmanager
