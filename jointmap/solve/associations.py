@@ -1,0 +1,240 @@
+"""Which associations hold: a decision for each robot's label as a whole.
+
+Every track has a landmark of its own; an accepted association ties it to the shared landmark by a
+tight factor. The redundancy of that factor gives the exact statistic of leaving it out (CHECKS 2d:
+the deleted residual is v / r), so the decision needs no solve per association. A rejected track
+stays where its own sightings put it; how far that is from the landmark it claims, and from every
+other landmark, decides whether it returns and what it agrees with instead.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.spatial import cKDTree
+from scipy.stats import chi2
+
+from jointmap.graph.problem import Tracks
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+#: Joint covariance (n, 2 dim, 2 dim) of the positions of pairs of landmark variables.
+JointCovariance = Callable[[Ints, Ints], Floats]
+
+#: Quantile of the accepted statistics from which their common scale is read; below the median, so
+#: that wrong associations that slipped in do not stretch it.
+_SCALE_QUANTILE = 0.3
+_SCALE_LEAST = 8
+#: An alternative must agree at least this well, and the claim at least this much worse.
+ALTERNATIVE_GATE = 0.99
+
+
+@dataclass(frozen=True)
+class Evidence:
+    """What a solve says about the associations.
+
+    ``linked`` (k,) tracks tied in it with ``statistic`` and ``dof`` (k,) of their factors;
+    ``own`` (T,) and ``shared`` (T,) landmark variables of each track (shared -1: private label);
+    ``positions`` (L, dim), ``component`` (L,) -1 where a landmark has no value.
+    """
+
+    linked: Ints
+    statistic: Floats
+    dof: Floats
+    own: Ints
+    shared: Ints
+    positions: Floats
+    component: Ints
+    joint: JointCovariance
+
+
+@dataclass(frozen=True)
+class Review:
+    """Decision per track (T,).
+
+    ``statistic`` is normalised by ``scale`` (the common variance factor of good associations,
+    at least 1) and NaN where nothing tests; ``alternative`` is the shared landmark that the track
+    agrees with instead (-1: none); ``unresolved`` marks claims where two labels contradict each
+    other and nothing tells which is wrong.
+    """
+
+    accepted: Bools
+    statistic: Floats
+    alternative: Ints
+    unresolved: Bools
+    scale: float
+    changed: bool
+
+
+def review(tracks: Tracks, accepted: Bools, evidence: Evidence, gate: float) -> Review:
+    """One round of decisions.
+
+    Parameters
+    ----------
+    accepted : (T,) present decisions
+    gate : probability that a right association passes
+
+    Returns
+    -------
+    Review
+    """
+    n = len(tracks.robot)
+    dim = evidence.positions.shape[1]
+    limit = float(chi2.ppf(gate, dim))
+    scale = _common_scale(evidence, dim)
+    statistic = np.full(n, np.nan)
+    tested = evidence.dof >= dim
+    statistic[evidence.linked[tested]] = evidence.statistic[tested] / scale
+    out = accepted.copy()
+    out[_worst(tracks, statistic, accepted, limit)] = False
+    removed = accepted & ~out
+    alternative = np.full(n, -1, dtype=np.int64)
+    claimed = (tracks.claim >= 0) & ~tracks.rejected
+    waiting = np.flatnonzero(claimed & ~accepted & (evidence.component[evidence.own] >= 0))
+    supported = _supported(tracks, accepted, evidence)
+    alternative[waiting] = _alternatives(tracks, waiting, supported, evidence, scale)
+    unresolved = np.zeros(n, dtype=bool)
+    if not removed.any():
+        _readmit(tracks, waiting, accepted, out, statistic, alternative, supported, evidence, scale, limit)
+        _settle(tracks, out, statistic, alternative, unresolved, evidence, scale, limit)
+    out[tracks.forced & claimed] = True
+    out[tracks.rejected] = False
+    return Review(out, statistic, alternative, unresolved, scale, bool((out != accepted).any()))
+
+
+def _common_scale(evidence: Evidence, dim: int) -> float:
+    """Variance factor of the accepted associations, at least 1.
+
+    Bursts share errors that a white model does not know; the statistic of right associations is
+    then too large by a common factor, which their own distribution shows.
+    """
+    t = evidence.statistic[evidence.dof >= dim]
+    if len(t) < _SCALE_LEAST:
+        return 1.0
+    return max(1.0, float(np.quantile(t, _SCALE_QUANTILE) / chi2.ppf(_SCALE_QUANTILE, dim)))
+
+
+def _worst(tracks: Tracks, statistic: Floats, accepted: Bools, limit: float) -> Ints:
+    """Tracks to reject in this round: the worst of each landmark, none far better than the worst.
+
+    One wrong association raises the statistics of its neighbours; taking only the largest ones
+    keeps the right ones from being dragged along.
+    """
+    bad = np.flatnonzero(accepted & ~tracks.forced & (statistic > limit))
+    if not len(bad):
+        return bad
+    bad = bad[np.argsort(-statistic[bad], kind="stable")]
+    bad = bad[statistic[bad] >= 0.3 * statistic[bad[0]]]
+    _, first = np.unique(tracks.claim[bad], return_index=True)
+    return bad[np.sort(first)]
+
+
+def _supported(tracks: Tracks, accepted: Bools, evidence: Evidence) -> Ints:
+    """Number of accepted tracks (L,) of each shared landmark."""
+    on = accepted & (evidence.component[evidence.own] >= 0) & (tracks.claim >= 0)
+    return np.bincount(tracks.claim[on], minlength=len(evidence.component)).astype(np.int64)
+
+
+def distance(evidence: Evidence, a: Ints, b: Ints, scale: float) -> Floats:
+    """Squared Mahalanobis distance (n,) of landmark pairs by their joint covariance, over scale.
+
+    Infinite where the two are not in one component.
+    """
+    out = np.full(len(a), np.inf)
+    same = (evidence.component[a] >= 0) & (evidence.component[a] == evidence.component[b])
+    if not same.any():
+        return out
+    i, j = a[same], b[same]
+    d = evidence.positions[i] - evidence.positions[j]
+    dim = d.shape[1]
+    c = evidence.joint(i, j)
+    cross = c[:, :dim, dim:]
+    cov = c[:, :dim, :dim] + c[:, dim:, dim:] - cross - np.swapaxes(cross, 1, 2)
+    cov += 1e-9 * np.eye(dim)
+    out[same] = np.einsum("ni,ni->n", d, np.linalg.solve(cov, d[:, :, None])[:, :, 0]) / scale
+    return out
+
+
+def _alternatives(
+    tracks: Tracks, waiting: Ints, supported: Ints, evidence: Evidence, scale: float
+) -> Ints:
+    """Shared landmark (len(waiting),) that each rejected track coincides with, -1 if none."""
+    best = np.full(len(waiting), -1, dtype=np.int64)
+    candidates = np.flatnonzero((supported > 0) & (evidence.component >= 0))
+    if not len(waiting) or not len(candidates):
+        return best
+    tree = cKDTree(evidence.positions[candidates])
+    k = min(4, len(candidates))
+    _, near = tree.query(evidence.positions[evidence.own[waiting]], k=k)
+    near = candidates[np.reshape(near, (len(waiting), k))]
+    d2 = distance(
+        evidence, np.repeat(evidence.own[waiting], k), near.ravel(), scale
+    ).reshape(len(waiting), k)
+    d2[near == tracks.claim[waiting][:, None]] = np.inf
+    pick = d2.argmin(axis=1)
+    rows = np.arange(len(waiting))
+    good = d2[rows, pick] < chi2.ppf(ALTERNATIVE_GATE, evidence.positions.shape[1])
+    best[good] = near[rows[good], pick[good]]
+    return best
+
+
+def _readmit(
+    tracks: Tracks,
+    waiting: Ints,
+    accepted: Bools,
+    out: Bools,
+    statistic: Floats,
+    alternative: Ints,
+    supported: Ints,
+    evidence: Evidence,
+    scale: float,
+    limit: float,
+) -> None:
+    """Take back tracks that agree with their landmark as others place it."""
+    there = waiting[(supported[tracks.claim[waiting]] > 0)]
+    there = there[evidence.component[tracks.claim[there]] >= 0]
+    if not len(there):
+        return
+    d2 = distance(evidence, evidence.own[there], tracks.claim[there], scale)
+    finite = np.isfinite(d2)
+    statistic[there[finite]] = d2[finite]
+    out[there[d2 < limit]] = True
+
+
+def _settle(
+    tracks: Tracks,
+    out: Bools,
+    statistic: Floats,
+    alternative: Ints,
+    unresolved: Bools,
+    evidence: Evidence,
+    scale: float,
+    limit: float,
+) -> None:
+    """Landmarks that nobody holds yet: the largest group of claims that agree takes the name."""
+    claimed = (tracks.claim >= 0) & ~tracks.rejected & (evidence.component[evidence.own] >= 0)
+    held = np.bincount(tracks.claim[claimed & out], minlength=len(evidence.component))
+    for landmark in np.unique(tracks.claim[claimed]):
+        if held[landmark]:
+            continue
+        mine = np.flatnonzero(claimed & (tracks.claim == landmark))
+        i, j = np.triu_indices(len(mine), 1)
+        d2 = distance(evidence, evidence.own[mine[i]], evidence.own[mine[j]], scale)
+        agree = np.eye(len(mine), dtype=bool)
+        agree[i, j] = agree[j, i] = d2 < limit
+        size = agree.sum(axis=1)
+        free = alternative[mine] < 0
+        # Agreement counts first; then a label that does not sit on another landmark; then sightings.
+        rank = np.lexsort((-tracks.n_sightings[mine], ~free, -size))
+        group = agree[rank[0]] & (free | (size[rank[0]] > 1))
+        out[mine[group]] = True
+        if len(mine) > 1:
+            other = np.array([d2[(i == k) | (j == k)].min() for k in range(len(mine))])
+            statistic[mine] = np.where(np.isfinite(other), other, np.nan)
+            if size[rank[0]] == 1 and free.sum() > 1:
+                unresolved[mine[free]] = True
