@@ -91,8 +91,9 @@ def complete(name: str, dimension: int, values: Mapping[str, Any] | pd.DataFrame
 
 def _typed(values: pd.Series[Any], column: Column) -> pd.Series[Any]:
     if column.dtype == "text":
-        # astype("str") alone would turn None into the text "None".
-        return values.astype("object").where(values.notna(), None).astype("str")
+        # An empty text and an unknown one are the same empty cell of a CSV.
+        known = values.notna() & (values.astype("object") != "")
+        return values.astype("object").where(known, None).astype("str")
     return values.astype(_DTYPES[column.dtype])  # type: ignore[call-overload, no-any-return]
 
 

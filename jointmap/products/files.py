@@ -112,11 +112,17 @@ def trajectory_table(trajectory: Trajectory) -> pa.Table:
 
 
 def write_csv(frame: pd.DataFrame, path: Path) -> None:
-    """A small table; numbers to full precision, unknown cells empty, yes/no as true/false."""
+    """A small table; numbers to full precision, unknown cells empty, yes/no as true/false.
+
+    A name that ends in ``.gz`` is compressed, without a time stamp so that results repeat.
+    """
     shown = frame.copy()
     for name in shown.columns[shown.dtypes == "boolean"]:
         shown[name] = shown[name].map({True: "true", False: "false"}).astype("object")
-    shown.to_csv(path, index=False, lineterminator="\n", encoding="utf-8")
+    packing: Any = {"method": "gzip", "mtime": 0} if path.name.endswith(".gz") else None
+    shown.to_csv(
+        path, index=False, lineterminator="\n", encoding="utf-8", compression=packing
+    )
 
 
 def write_json(values: Mapping[str, Any], path: Path) -> None:
