@@ -1,6 +1,7 @@
 """Worlds with known truth: survey folders exactly as TABLES.md says, and the truth beside them."""
 
-from jointmap.simulate.run import WORLDS, Simulation, SimulationReport, build, simulate
+from jointmap.simulate.build import WORLDS, Simulation, build
+from jointmap.simulate.run import SimulationReport, simulate
 from jointmap.simulate.settings import SimulationSettings
 
 __all__ = [

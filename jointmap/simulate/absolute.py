@@ -86,37 +86,32 @@ def recognise_places(
     """
     rng = streams.get("closures")
     names = list(motions)
-    dim = motions[names[0]].dimension
-    space = group(dim)
-    robot, t_s = _moments(motions, settings, rng)
+    space = group(motions[names[0]].dimension)
+    robot, log_s, t_s = _moments(motions, clocks, settings, rng)
     pose = np.concatenate([motions[n].at(t_s[robot == k]) for k, n in enumerate(names)])
     a, b = _same_place(space.translation(pose), space.rotation(pose), robot, t_s)
     chosen = np.sort(rng.permutation(len(a))[: settings.closures])
     a, b = a[chosen], b[chosen]
-    log_s = np.empty(len(t_s))
-    for k, n in enumerate(names):
-        log_s[robot == k] = np.round(clocks[n].log(t_s[robot == k]), 6)
-        t_s[robot == k] = clocks[n].survey(log_s[robot == k])
-    pose = np.concatenate([motions[n].at(t_s[robot == k]) for k, n in enumerate(names)])
-    seen = space.between(pose[a], pose[b])
-    shift = slice(0, 2) if dim == 2 else slice(3, 6)
-    sigma = np.full(space.dof, CLOSURE_SIGMA_RAD)
-    sigma[shift] = CLOSURE_SIGMA_M
-    sigma *= settings.sighting_noise
-    noise = streams.get("closure noise").normal(size=(len(a), space.dof)) * sigma
     wrong = np.zeros(len(a), dtype=bool)
     wrong[rng.permutation(len(a))[: round(settings.wrong_closures * len(a))]] = True
-    noise[wrong] += streams.get("closure error").uniform(-1, 1, (int(wrong.sum()), space.dof)) * 2
-    rows = space.to_rows(space.retract(seen, noise))
-    axes = ("x_m", "y_m", "yaw_rad") if dim == 2 else ("x_m", "y_m", "z_m", "qx", "qy", "qz", "qw")
+    sigma = np.full(space.dof, CLOSURE_SIGMA_RAD)
+    sigma[slice(0, 2) if space.dim == 2 else slice(3, 6)] = CLOSURE_SIGMA_M
+    noise = streams.get("closure noise").normal(size=(len(a), space.dof)) * sigma
+    noise *= settings.sighting_noise
+    noise[wrong] += streams.get("closure error").uniform(-2, 2, (int(wrong.sum()), space.dof))
+    rows = space.to_rows(space.retract(space.between(pose[a], pose[b]), noise))
+    axes = ("x_m", "y_m", "z_m", "qx", "qy", "qz", "qw")
     columns: Columns = {
         "robot_a": [names[k] for k in robot[a]],
         "t_a_s": log_s[a],
         "robot_b": [names[k] for k in robot[b]],
         "t_b_s": log_s[b],
     }
-    columns |= {axis: rows[:, k] for k, axis in enumerate(axes)}
-    return ClosureLog(columns | _closure_sigmas(len(a), dim), wrong)
+    columns |= {
+        axis: rows[:, k]
+        for k, axis in enumerate(axes if space.dim == 3 else ("x_m", "y_m", "yaw_rad"))
+    }
+    return ClosureLog(columns | _closure_sigmas(len(a), space.dim), wrong)
 
 
 def _closure_sigmas(n: int, dim: int) -> Columns:
@@ -129,15 +124,20 @@ def _closure_sigmas(n: int, dim: int) -> Columns:
 
 
 def _moments(
-    motions: Mapping[str, Motion], settings: SimulationSettings, rng: np.random.Generator
-) -> tuple[NDArray[np.int64], Floats]:
-    """Moments at which robots look about: robot index and survey time, ordered by robot."""
+    motions: Mapping[str, Motion],
+    clocks: Mapping[str, LogClock],
+    settings: SimulationSettings,
+    rng: np.random.Generator,
+) -> tuple[NDArray[np.int64], Floats, Floats]:
+    """Moments at which robots look about: robot index, stamp and survey time, by robot."""
     each = int(np.clip(8 * settings.closures / len(motions), 100, 2500))
-    robot, times = [], []
-    for k, motion in enumerate(motions.values()):
-        times.append(np.sort(rng.uniform(motion.t_s[0], motion.t_s[-1], each)))
+    robot, stamps, times = [], [], []
+    for k, (name, motion) in enumerate(motions.items()):
+        when = np.sort(rng.uniform(motion.t_s[0] + 0.01, motion.t_s[-1] - 0.01, each))
+        stamps.append(np.round(clocks[name].log(when), 6))
+        times.append(clocks[name].survey(stamps[-1]))
         robot.append(np.full(each, k))
-    return np.concatenate(robot), np.concatenate(times)
+    return np.concatenate(robot), np.concatenate(stamps), np.concatenate(times)
 
 
 def _same_place(

@@ -84,9 +84,7 @@ def _prefix(name: str, team: tuple[str, ...]) -> str:
     return name
 
 
-def wrong_claims(
-    robot: Ints, plate: Ints, settings: SimulationSettings, streams: Streams
-) -> Ints:
+def wrong_claims(robot: Ints, plate: Ints, settings: SimulationSettings, streams: Streams) -> Ints:
     """Claimed plates (n,), wrong for the stated share of the rows that another robot can check."""
     claim = plate.copy()
     pairs, counts = np.unique(plate, return_counts=True)
@@ -116,9 +114,7 @@ def _at_random(claim: Ints, rows: Ints, targets: Ints, rng: np.random.Generator)
     claim[rows] = targets[(own + rng.integers(1, len(targets), len(rows))) % len(targets)]
 
 
-def _swap(
-    claim: Ints, rows: Ints, robot: Ints, count: int, rng: np.random.Generator
-) -> None:
+def _swap(claim: Ints, rows: Ints, robot: Ints, count: int, rng: np.random.Generator) -> None:
     """Exchange plates within pairs of rows of one robot until ``count`` rows are wrong."""
     mixed = rng.permutation(rows)
     mixed = mixed[np.argsort(robot[mixed], kind="stable")]
@@ -129,9 +125,7 @@ def _swap(
     claim[chosen] = claim[chosen[:, ::-1]]
 
 
-def _shift(
-    claim: Ints, rows: Ints, robot: Ints, count: int, rng: np.random.Generator
-) -> Ints:
+def _shift(claim: Ints, rows: Ints, robot: Ints, count: int, rng: np.random.Generator) -> Ints:
     """Shift blocks of rows, ordered along the walls, to the next row's plate; rows changed.
 
     Robots are taken in random order; of each at most all but the last of its rows.

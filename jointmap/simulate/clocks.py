@@ -30,7 +30,9 @@ class LogClock:
     def log(self, survey_s: Floats) -> Floats:
         """Stamps of survey times."""
         first = self.first_log_s - self.offset_s
-        return np.asarray(self.first_log_s + (survey_s - first) / (1 - self.drift), dtype=np.float64)
+        return np.asarray(
+            self.first_log_s + (survey_s - first) / (1 - self.drift), dtype=np.float64
+        )
 
     def survey(self, log_s: Floats) -> Floats:
         """Survey times of stamps."""

@@ -109,7 +109,7 @@ def _drive(
     uv, s, heading = route.at(t)
     xy = plan.warp(uv)
     dt = np.diff(t)
-    moved = np.diff(s)
+    moved = np.maximum(np.diff(s), 0.0)
     noise = robot.odometry_noise
     spread = np.sqrt(noise["translation_per_sqrt_m"] ** 2 * moved)
     slip = spread * rng.normal(size=len(dt))

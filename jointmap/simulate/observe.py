@@ -133,8 +133,10 @@ def see_robots(
     """Frame number and target of every other robot's target point that is seen and reported."""
     dim = 2 if frames.pose.ndim == 2 else 3
     space = group(dim)
-    rows, numbers, points = [], [], []
-    for number, (motion, other) in others.items():
+    rows: list[Ints] = []
+    numbers: list[Ints] = []
+    points: list[Floats] = []
+    for index, (motion, other) in others.items():
         live = (frames.t_s >= motion.t_s[0]) & (frames.t_s <= motion.t_s[-1])
         i = np.flatnonzero(live)
         point = space.transform(motion.at(frames.t_s[i]), other.target_point)
@@ -145,7 +147,7 @@ def see_robots(
         eye = space.translation(frames.pose[i[seen]])
         free = ~blocked(eye[:, :2], point[seen][:, :2], walls, settings.max_range_m)
         rows.append(i[seen][free])
-        numbers.append(np.full(int(free.sum()), number))
+        numbers.append(np.full(int(free.sum()), index))
         points.append(point[seen][free])
     i = np.concatenate([*rows, np.empty(0, dtype=np.int64)])
     number = np.concatenate([*numbers, np.empty(0, dtype=np.int64)])
@@ -178,49 +180,49 @@ def report(
     Parameters
     ----------
     rows : (n,) int
-        Frame of each observation, not decreasing.
+        Frame of each observation.
     *name : object
         Name of the streams: kind, robot, sensor.
     """
     order = np.lexsort((target.number, rows))
     rows = rows[order]
     target = Target(*(getattr(target, f)[order] for f in Target.__dataclass_fields__))
-    pose = frames.pose[rows]
+    pose, t_s = frames.pose[rows], frames.t_s[rows]
     dim = target.point.shape[1]
     local = group(dim).inverse_transform(pose, target.point)
-    cartesian = ("x_m", "y_m", "z_m")[:dim]
-    tagged = target.oriented
     gross = _gross_rows(len(rows), settings, streams, *name)
     values: dict[str, Floats] = {}
-    for columns, use in ((sensor.columns, ~tagged), (cartesian, tagged)):
-        if columns is cartesian and not tagged.any():
+    cartesian = ("x_m", "y_m", "z_m")[:dim]
+    for columns, use, kind in (
+        (sensor.columns, ~target.oriented, "point"),
+        (cartesian, target.oriented, "tag"),
+    ):
+        if not use.any():
             continue
-        exact = _exact(local, columns)
         error = sensor_errors(
-            frames.t_s[rows],
-            target.number,
-            target.incidence_rad,
-            len(columns),
-            settings,
-            streams,
-            *name,
-            "tag" if columns is cartesian else "",
+            t_s, target.number, target.incidence_rad, len(columns), settings, streams, *name, kind
         )
         error *= _sigmas(sensor, columns, np.linalg.norm(local, axis=1))
-        error[gross] += gross_errors(columns, int(gross.sum()), streams.get("gross size", *name))
-        for k, column in enumerate(columns):
-            seen = values.setdefault(column, np.full(len(rows), np.nan))
-            seen[use] = (exact[:, k] + error[:, k])[use]
-    for column in ("bearing_rad", "elevation_rad"):
-        if column in values:
-            values[column] = wrap(values[column])
-    if "range_m" in values:
-        values["range_m"] = np.maximum(values["range_m"], 0.05)
-    if tagged.any():
+        size = gross_errors(columns, int(gross.sum()), streams.get("gross size", *name, kind))
+        error[gross] += size
+        _fill(values, columns, _exact(local, columns) + error, use)
+    if target.oriented.any():
         values |= _orientation(pose, target, sensor, streams, *name)
-    return Observed(
-        frames.log_s[rows], np.zeros(len(rows), dtype=np.int64), target.number, values, gross
-    )
+    sensors = np.zeros(len(rows), dtype=np.int64)
+    return Observed(frames.log_s[rows], sensors, target.number, values, gross)
+
+
+def _fill(values: dict[str, Floats], columns: tuple[str, ...], seen: Floats, use: Bools) -> None:
+    """Put components (n, c) of the rows in use into their columns, within their domain."""
+    for k, column in enumerate(columns):
+        cells = values.setdefault(column, np.full(len(use), np.nan))
+        cells[use] = seen[use, k]
+        if column == "bearing_rad":
+            cells[use] = wrap(cells[use])
+        elif column == "elevation_rad":
+            cells[use] = np.clip(cells[use], -np.pi / 2, np.pi / 2)
+        elif column == "range_m":
+            cells[use] = np.maximum(cells[use], 0.05)
 
 
 def _exact(local: Floats, columns: tuple[str, ...]) -> Floats:

@@ -65,7 +65,7 @@ def log_odometry(
     else:
         pose = _integrate(steps, motion, robot, settings, streams)
         rows = group(motion.dimension).to_rows(pose)
-        names = ("x_m", "y_m", "yaw_rad")
+        names: tuple[str, ...] = ("x_m", "y_m", "yaw_rad")
         if motion.dimension == 3:
             names = ("x_m", "y_m", "z_m", "qx", "qy", "qz", "qw")
         values = {c: rows[:, k] for k, c in enumerate(names)}
@@ -85,31 +85,23 @@ def _twist_columns(twist: Floats, robot: RobotSpec) -> dict[str, Floats]:
     return {c: columns[c] for c in (*names[3:], *names[:3])}
 
 
+def _parts(dimension: int) -> tuple[slice, slice]:
+    """Translation and rotation within a tangent."""
+    return (slice(0, 2), slice(2, 3)) if dimension == 2 else (slice(3, 6), slice(0, 3))
+
+
 def _reported_steps(
     motion: Motion, robot: RobotSpec, settings: SimulationSettings, streams: Streams
 ) -> tuple[Floats, tuple[tuple[float, float], ...]]:
     """Reported motion of each interval (n - 1, dof), tangent order, and the slips put in."""
     span = np.diff(motion.t_s)
     true = motion.twist() * span[:, None]
-    shift = slice(0, 2) if motion.dimension == 2 else slice(3, 6)
-    turn = slice(2, 3) if motion.dimension == 2 else slice(0, 3)
+    shift, turn = _parts(motion.dimension)
     steps = true.copy()
     steps[:, shift] /= robot.scale
     steps[:, turn] /= robot.rotation_scale
-    noise = robot.odometry_noise
-    metres = np.linalg.norm(true[:, shift], axis=1)
-    radians = np.linalg.norm(true[:, turn], axis=1)
     draws = streams.get("odometry", robot.name).normal(size=true.shape)
-    spread = np.empty_like(true)
-    spread[:, shift] = np.sqrt(
-        noise["translation_per_sqrt_m"] ** 2 * metres + noise["translation_per_sqrt_s"] ** 2 * span
-    )[:, None]
-    spread[:, turn] = np.sqrt(
-        noise["rotation_per_sqrt_m"] ** 2 * metres
-        + noise["rotation_per_sqrt_rad"] ** 2 * radians
-        + noise["rotation_per_sqrt_s"] ** 2 * span
-    )[:, None]
-    steps += spread * draws
+    steps += step_sigma(true, span, motion.dimension, robot.odometry_noise) * draws
     if settings.odometry_correlated > 0:
         draws = streams.get("odometry correlated", robot.name).normal(size=(len(span), 2))
         one = np.zeros(len(span), dtype=np.int64)
@@ -119,31 +111,44 @@ def _reported_steps(
         steps[:, turn] += true[:, turn] * error[:, 1:]
     if motion.dimension == 2 and robot.kind == "crawler":
         steps[:, 1] = 0.0  # slip to the side is in the truth and unknown to the wheels
-    return steps, _add_slips(steps, shift, turn, motion, robot, settings, streams)
+    slips = _slips(len(steps), robot.name, settings, streams)
+    for first, last, ahead, about in slips:
+        steps[first:last, shift.start] += ahead / (last - first)
+        steps[first:last, turn.stop - 1] += about / (last - first)
+    times = [(float(motion.t_s[s[0]]), float(motion.t_s[s[1]])) for s in slips]
+    return steps, tuple(sorted(times))
 
 
-def _add_slips(
-    steps: Floats,
-    shift: slice,
-    turn: slice,
-    motion: Motion,
-    robot: RobotSpec,
-    settings: SimulationSettings,
-    streams: Streams,
-) -> tuple[tuple[float, float], ...]:
-    """Wheels spin: reported motion ahead and a turn that did not happen, spread over a second."""
-    rng = streams.get("slips", robot.name)
+def step_sigma(steps: Floats, span_s: Floats, dimension: int, noise: Mapping[str, float]) -> Floats:
+    """White sigma (n, dof) of each component of true steps (n, dof) that last ``span_s`` (n,)."""
+    shift, turn = _parts(dimension)
+    metres = np.linalg.norm(steps[:, shift], axis=1)
+    radians = np.linalg.norm(steps[:, turn], axis=1)
+    sigma = np.empty_like(steps)
+    sigma[:, shift] = np.sqrt(
+        noise["translation_per_sqrt_m"] ** 2 * metres
+        + noise["translation_per_sqrt_s"] ** 2 * span_s
+    )[:, None]
+    sigma[:, turn] = np.sqrt(
+        noise["rotation_per_sqrt_m"] ** 2 * metres
+        + noise["rotation_per_sqrt_rad"] ** 2 * radians
+        + noise["rotation_per_sqrt_s"] ** 2 * span_s
+    )[:, None]
+    return sigma
+
+
+def _slips(
+    n: int, name: str, settings: SimulationSettings, streams: Streams
+) -> list[tuple[int, int, float, float]]:
+    """Slips of one robot: first and last interval, metres and radians that did not happen."""
+    rng = streams.get("slips", name)
     rows = max(1, round(SLIP_S * settings.odometry_rate_hz))
     found = []
     for _ in range(settings.odometry_slips):
-        first = int(rng.integers(0, max(1, len(steps) - rows)))
+        first = int(rng.integers(0, max(1, n - rows)))
         ahead, about = rng.uniform(0.3, 1.0), rng.uniform(0.15, 0.5) * rng.choice([-1, 1])
-        part = slice(first, first + rows)
-        steps[part, shift.start] += ahead / rows
-        steps[part, turn.stop - 1] += about / rows
-        last = min(first + rows, len(motion.t_s) - 1)
-        found.append((float(motion.t_s[first]), float(motion.t_s[last])))
-    return tuple(sorted(found))
+        found.append((first, min(first + rows, n), float(ahead), float(about)))
+    return found
 
 
 def _outages(
@@ -188,9 +193,7 @@ def _integrate(
     return space.compose(start, pose)
 
 
-def _integrate_level(
-    steps: Floats, motion: Motion, robot: RobotSpec, streams: Streams
-) -> Floats:
+def _integrate_level(steps: Floats, motion: Motion, robot: RobotSpec, streams: Streams) -> Floats:
     """Odometry that knows the vertical: only yaw and position drift (n, 3, 4).
 
     The reported attitude is ``Rz(e) R_true D``, with the accumulated yaw error ``e`` and a small
@@ -209,9 +212,7 @@ def _integrate_level(
     lean = np.column_stack([tilt, np.zeros((len(error), 4))])
     tangent = np.zeros((len(error), 6))
     tangent[:, 2] = error
-    attitude = (
-        space.rotation(space.exp(tangent)) @ rotation @ space.rotation(space.exp(lean))
-    )
+    attitude = space.rotation(space.exp(tangent)) @ rotation @ space.rotation(space.exp(lean))
     moved = space.translation(space.exp(steps))
     track = np.einsum("nij,nj->ni", attitude[:-1], moved)
     place = np.concatenate([np.zeros((1, 3)), np.cumsum(track, axis=0)])

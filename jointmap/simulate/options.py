@@ -28,7 +28,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         text = f"{item.metadata['help']} (default: {_show(default)})".replace("%", "%%")
         if isinstance(default, bool):
             parser.add_argument(
-                option, dest=item.name, action=argparse.BooleanOptionalAction, default=None, help=text
+                option,
+                dest=item.name,
+                action=argparse.BooleanOptionalAction,
+                default=None,
+                help=text,
             )
         elif isinstance(default, str):
             parser.add_argument(

@@ -109,9 +109,7 @@ def sensor_errors(
     return total
 
 
-def gross_errors(
-    columns: tuple[str, ...], count: int, rng: np.random.Generator
-) -> Floats:
+def gross_errors(columns: tuple[str, ...], count: int, rng: np.random.Generator) -> Floats:
     """Gross errors (count, components): metres and radians far outside the noise."""
     sign = np.where(rng.random((count, len(columns))) < 0.5, -1.0, 1.0)
     size = rng.random((count, len(columns)))

@@ -10,6 +10,7 @@ speed, lateral acceleration, turn rate and acceleration. With squared speed ``q(
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -142,7 +143,7 @@ def _curve(plan: Plan, walk: list[int], rng: np.random.Generator) -> tuple[Float
     way[0::2], way[1::2] = points, middle
     legs: list[Floats] = []
     bounds = [0, *about, len(walk) - 1]
-    for a, b in zip(bounds[:-1], bounds[1:], strict=True):
+    for a, b in pairwise(bounds):
         corner = way[2 * a : 2 * b + 1]
         if legs:
             corner = np.concatenate([legs[-1][-1:], corner[1:]])
@@ -174,15 +175,14 @@ def _headings(xy: Floats, s: Floats, first: Ints) -> tuple[Floats, Floats, Float
     return heading, turn, curvature
 
 
-def _speed_cap(
-    s: Floats, curvature: Floats, limits: Limits, rng: np.random.Generator
-) -> Floats:
+def _speed_cap(s: Floats, curvature: Floats, limits: Limits, rng: np.random.Generator) -> Floats:
     """Squared speed that limits of speed, lateral acceleration and turn rate allow, (n,)."""
     pieces = max(2, int(s[-1] / 9.0))
     cruise = limits.speed * rng.uniform(0.5, 1.0, pieces)
     speed = cruise[np.minimum((s / (s[-1] + 1e-9) * pieces).astype(int), pieces - 1)]
     bend = np.maximum(np.abs(curvature), 1e-6)
-    return np.minimum(np.minimum(speed**2, limits.lateral / bend), (limits.rate / bend) ** 2)
+    cap = np.minimum(limits.lateral / bend, (limits.rate / bend) ** 2)
+    return np.asarray(np.minimum(speed**2, cap), dtype=np.float64)
 
 
 def _envelope(cap: Floats, s: Floats, acceleration: float) -> Floats:

@@ -11,9 +11,9 @@ from numpy.typing import NDArray
 
 from jointmap.frames import group
 from jointmap.simulate.associations import own_labels
+from jointmap.simulate.build import Simulation
 from jointmap.simulate.files import write_json, write_table, write_toml
 from jointmap.simulate.observe import Observed
-from jointmap.simulate.run import Simulation
 from jointmap.simulate.team import RobotSpec, SensorSpec
 
 Ints = NDArray[np.int64]
@@ -109,9 +109,7 @@ def _sections(simulation: Simulation) -> list[tuple[str, dict[str, Any]]]:
     return sections
 
 
-def _robot_sections(
-    simulation: Simulation, robot: RobotSpec
-) -> list[tuple[str, dict[str, Any]]]:
+def _robot_sections(simulation: Simulation, robot: RobotSpec) -> list[tuple[str, dict[str, Any]]]:
     settings, ending = simulation.settings, simulation.settings.format
     name = f"robots.{robot.name}"
     entry: dict[str, Any] = {"odometry": f"{robot.name}/odometry.{ending}"}

@@ -19,12 +19,57 @@ Floats = NDArray[np.float64]
 
 #: Names of the team; every fourth robot is a quadrotor.
 ROBOT_NAMES = (
-    "heron otter vole swift badger marten stoat kestrel adder toad newt martin "
-    "hedgehog polecat shrew merlin dormouse weasel rabbit lapwing beetle snail mole plover "
-    "fox hare ferret curlew lizard frog cricket redwing squirrel rat mouse wagtail "
-    "woodlouse spider millipede dipper goat ram ewe starling pony wether heifer linnet "
-    "slowworm grouse"
-).split()
+    "heron",
+    "otter",
+    "vole",
+    "swift",
+    "badger",
+    "marten",
+    "stoat",
+    "kestrel",
+    "adder",
+    "toad",
+    "newt",
+    "martin",
+    "hedgehog",
+    "polecat",
+    "shrew",
+    "merlin",
+    "dormouse",
+    "weasel",
+    "rabbit",
+    "lapwing",
+    "beetle",
+    "snail",
+    "mole",
+    "plover",
+    "fox",
+    "hare",
+    "ferret",
+    "curlew",
+    "lizard",
+    "frog",
+    "cricket",
+    "redwing",
+    "squirrel",
+    "rat",
+    "mouse",
+    "wagtail",
+    "woodlouse",
+    "spider",
+    "millipede",
+    "dipper",
+    "goat",
+    "ram",
+    "ewe",
+    "starling",
+    "pony",
+    "wether",
+    "heifer",
+    "linnet",
+    "slowworm",
+    "grouse",
+)
 
 #: White sigmas at factor 1: metres, radians.
 BASE_SIGMA: Mapping[str, float] = {
@@ -156,11 +201,11 @@ def _sensors(
     k: int, kind: str, dimension: int, factor: float, settings: SimulationSettings
 ) -> tuple[SensorSpec, ...]:
     """Range and bearing (2-D), with elevation (3-D); a quadrotor in 3-D has two cameras."""
-    polar = ("bearing_rad", "range_m")
+    polar: tuple[str, ...] = ("bearing_rad", "range_m")
     if dimension == 3:
         polar = ("bearing_rad", "elevation_rad", "range_m")
     names = list(_SENSOR_YAW)[: settings.sensors]
-    columns = dict.fromkeys(names, polar)
+    columns: dict[str, tuple[str, ...]] = dict.fromkeys(names, polar)
     if kind == "quadrotor" and dimension == 3:
         columns = {"camera": ("x_m", "y_m", "z_m"), "wide": ("bearing_rad", "elevation_rad")}
     white = settings.sighting_noise * factor

@@ -60,7 +60,8 @@ def incidence(eye: Floats, point: Floats, yaw: Floats) -> Floats:
     """Angle (n,) between the plate's normal and the line to the eye, in plan, radians."""
     back = eye[:, :2] - point[:, :2]
     along = back[:, 0] * np.cos(yaw) + back[:, 1] * np.sin(yaw)
-    return np.arccos(np.clip(along / np.maximum(np.hypot(*back.T), 1e-12), -1.0, 1.0))
+    cosine = along / np.maximum(np.hypot(back[:, 0], back[:, 1]), 1e-12)
+    return np.asarray(np.arccos(np.clip(cosine, -1.0, 1.0)), dtype=np.float64)
 
 
 def blocked(eye: Floats, point: Floats, walls: Floats, reach: float) -> Bools:
