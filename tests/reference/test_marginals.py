@@ -7,6 +7,7 @@ import io
 import gtsam
 import numpy as np
 import pytest
+from adjustment_networks import landmark_graph, planar_slam, sphere2500
 
 from jointmap.trust.elimination import SingularSystemError, clique_tree, eliminate, loose_keys
 from jointmap.trust.marginals import selected_inverse, selected_inverse_of
@@ -14,104 +15,6 @@ from jointmap.trust.solve_pairs import SquareRootFactor
 
 #: Two exact algorithms in double precision on systems of condition 1e8: eight digits remain.
 RELATIVE = 1e-6
-
-
-def sphere2500():
-    """sphere2500 read as square-root information (source: gtsam/Data).
-
-    The first pose is held by a prior of sigma 1e-4; a tighter one takes a hundred metres times
-    1e-4 rad out of the last pose's printed sigmas.
-    """
-    path = gtsam.findExampleDataFile("sphere2500.txt")
-    graph, values = gtsam.NonlinearFactorGraph(), gtsam.Values()
-    upper = np.triu_indices(6)
-    order = np.array([3, 4, 5, 0, 1, 2])  # file: translation first; gtsam: rotation first
-    values.insert(0, gtsam.Pose3())
-    with open(path) as lines:
-        for line in lines:
-            word = line.split()
-            if word[0] != "EDGE3":
-                continue
-            i, j = int(word[1]), int(word[2])
-            number = np.array(word[3:], float)
-            motion = gtsam.Pose3(gtsam.Rot3.RzRyRx(*number[3:6]), gtsam.Point3(*number[:3]))
-            root = np.zeros((6, 6))
-            root[upper] = number[6:]
-            information = (root.T @ root)[np.ix_(order, order)]
-            model = gtsam.noiseModel.Gaussian.Information(information)
-            graph.add(gtsam.BetweenFactorPose3(i, j, motion, model))
-            if j == i + 1:
-                values.insert(j, values.atPose3(i).compose(motion))
-    graph.add(gtsam.PriorFactorPose3(0, gtsam.Pose3(), gtsam.noiseModel.Isotropic.Sigma(6, 1e-4)))
-    params = gtsam.LevenbergMarquardtParams()
-    params.setRelativeErrorTol(1e-14)
-    params.setAbsoluteErrorTol(1e-14)
-    return graph, gtsam.LevenbergMarquardtOptimizer(graph, values, params).optimize()
-
-
-def planar_slam():
-    """Three poses 0 1 2 and two landmarks 3 4 (source: gtsam testMarginals.cpp, planarSLAMmarginals)."""
-    graph, values = gtsam.NonlinearFactorGraph(), gtsam.Values()
-    sigma = gtsam.noiseModel.Diagonal.Sigmas
-    graph.add(gtsam.PriorFactorPose2(0, gtsam.Pose2(), sigma(np.array([0.3, 0.3, 0.1]))))
-    odometry = sigma(np.array([0.2, 0.2, 0.1]))
-    for i in (0, 1):
-        graph.add(gtsam.BetweenFactorPose2(i, i + 1, gtsam.Pose2(2, 0, 0), odometry))
-    sighting = sigma(np.array([0.1, 0.2]))
-    for pose, landmark, degrees, distance in (
-        (0, 3, 45, np.sqrt(8)),
-        (1, 3, 90, 2.0),
-        (2, 4, 90, 2.0),
-    ):
-        graph.add(
-            gtsam.BearingRangeFactor2D(
-                pose, landmark, gtsam.Rot2.fromDegrees(degrees), distance, sighting
-            )
-        )
-    for i in range(3):
-        values.insert(i, gtsam.Pose2(2.0 * i, 0, 0))
-    values.insert(3, gtsam.Point2(2, 2))
-    values.insert(4, gtsam.Point2(4, 2))
-    return graph, values, np.array([3, 3, 3, 2, 2])
-
-
-def landmark_graph(dimension: int, poses: int = 60, landmarks: int = 25):
-    """A random walk that sights landmarks around it, at its linearisation point."""
-    rng = np.random.default_rng(dimension)
-    graph, values = gtsam.NonlinearFactorGraph(), gtsam.Values()
-    dof = 3 if dimension == 2 else 6
-    Pose, between, prior, bearing_range = (
-        (gtsam.Pose2, gtsam.BetweenFactorPose2, gtsam.PriorFactorPose2, gtsam.BearingRangeFactor2D)
-        if dimension == 2
-        else (
-            gtsam.Pose3,
-            gtsam.BetweenFactorPose3,
-            gtsam.PriorFactorPose3,
-            gtsam.BearingRangeFactor3D,
-        )
-    )
-    step = np.zeros(dof)
-    step[-dimension if dimension == 3 else 0] = 1.0
-    pose = Pose()
-    points = rng.uniform(-15, 15, (landmarks, dimension))
-    for k, point in enumerate(points):
-        values.insert(poses + k, point)
-    graph.add(prior(0, pose, gtsam.noiseModel.Isotropic.Sigma(dof, 1e-3)))
-    for i in range(poses):
-        values.insert(i, pose)
-        for k in rng.choice(landmarks, 3, replace=False):
-            noise = gtsam.noiseModel.Isotropic.Sigma(dimension, 0.1)
-            graph.add(
-                bearing_range(
-                    i, poses + int(k), pose.bearing(points[k]), pose.range(points[k]), noise
-                )
-            )
-        motion = Pose.Expmap(step + 0.2 * rng.standard_normal(dof))
-        if i + 1 < poses:
-            noise = gtsam.noiseModel.Isotropic.Sigma(dof, 0.05)
-            graph.add(between(i, i + 1, motion, noise))
-        pose = pose.compose(motion)
-    return graph, values, np.repeat([dof, dimension], [poses, landmarks])
 
 
 def relative_error(ours, theirs):
