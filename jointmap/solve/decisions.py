@@ -54,7 +54,9 @@ def statistic_scale(statistic: Floats, dof: Floats) -> float:
     return max(1.0, float(np.median(ratio)))
 
 
-def gate_rows(block: Block, statistic: Floats, dof: Floats, gate: float) -> tuple[Bools, Floats]:
+def gate_rows(
+    block: Block, statistic: Floats, dof: Floats, gate: float, scale: float | None = None
+) -> tuple[Bools, Floats]:
     """Rows that stay in (n,) and their weights (n,).
 
     Parameters
@@ -62,17 +64,19 @@ def gate_rows(block: Block, statistic: Floats, dof: Floats, gate: float) -> tupl
     statistic, dof : (n,) chi-square statistic of each row and its degrees of freedom (0: not
         tested, stays)
     gate : probability that a good row passes
+    scale : variance factor of the statistics; None: from themselves
     """
+    scale = statistic_scale(statistic, dof) if scale is None else scale
     weight = np.ones(len(statistic))
     tested = dof > 0
     if block.kind == "odometry":
         limit = chi2.ppf(ODOMETRY_GATE, np.maximum(dof, 1))
-        limit = limit * statistic_scale(statistic, dof)
+        limit = limit * scale
         over = np.where(tested, statistic / limit, 0.0)
         weight = np.where(over > 1.0, np.maximum(over, 1.0) ** -2.0, 1.0)
         weight[over > JUMP_RATIO] = JUMP_WEIGHT
         return np.ones(len(statistic), dtype=bool), weight
     if block.kind not in VETTED:
         return np.ones(len(statistic), dtype=bool), weight
-    limit = chi2.ppf(gate, np.maximum(dof, 1)) * statistic_scale(statistic, dof)
+    limit = chi2.ppf(gate, np.maximum(dof, 1)) * scale
     return ~(tested & (statistic > limit)), weight

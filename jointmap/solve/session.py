@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap import frames
+from jointmap.graph.calibrate import Calibration
 from jointmap.graph.noise import Noise, block_covariance, whitening
 from jointmap.graph.problem import Assignment, Block, Problem, State
 from jointmap.solve.decisions import Decisions
@@ -94,7 +95,7 @@ def system_of(
     state: State,
     kernel: Kernel | None,
     sensitivity: Mapping[int, Floats],
-    calibration_offset: Floats,
+    calibration: Calibration,
 ) -> System:
     """The system of the present decisions; with a kernel all usable rows are in."""
     used = decisions.usable if kernel is not None else decisions.used
@@ -113,7 +114,8 @@ def system_of(
         weighted,
         kernels,
         sensitivity,
-        calibration_offset,
+        calibration.offset,
+        calibration.prior,
         linked_tracks(problem, decisions, present),
         LINK_SIGMA,
     )

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from jointmap import frames
 from jointmap.graph.models import Linearised, linearise_block
+from jointmap.graph.calibrate import ODOMETRY_PARAMETERS
 from jointmap.graph.problem import Assignment, Block, Problem, State
 from jointmap.ingest.survey import Provenance
 from jointmap.solve.gauge import Gauge, components, make_gauge, motion_basis, point_motion, pose_motion
@@ -26,8 +27,6 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
-#: Prior standard deviations of the odometry calibration: translation scale, turn scale, lag in s.
-CALIBRATION_PRIOR = np.array([0.2, 0.2, 0.5])
 #: A redescending kernel never weighs a row below this, so that no chain is ever cut in two.
 WEIGHT_FLOOR = 1e-7
 
@@ -49,8 +48,13 @@ def take_rows(block: Block, rows: Bools | Ints) -> Block:
 
 @dataclass(frozen=True)
 class Part:
-    """The used rows of one block: ``index`` (n,) into the whole block, whitening (n, m, m)."""
+    """The used rows of one block.
 
+    ``at`` is the place of the block in the problem, ``index`` (n,) the rows in it; ``whiten``
+    (n, m, m); ``key_a``, ``key_b`` (n,) variables; ``landmark`` (n,) of sightings and control.
+    """
+
+    at: int
     block: Block
     index: Ints
     whiten: Floats
@@ -87,7 +91,7 @@ class System:
     links: Links
     sensitivity: Mapping[int, Floats] = field(default_factory=dict)
     calibration_offset: Floats = field(default_factory=lambda: np.zeros((0, 3)))
-    calibration_prior: Floats = field(default_factory=lambda: CALIBRATION_PRIOR)
+    calibration_prior: Floats = field(default_factory=lambda: np.ones((0, 3)))
 
 
 def make_system(
@@ -98,6 +102,7 @@ def make_system(
     kernels: tuple[Kernel | None, ...],
     sensitivity: Mapping[int, Floats] | None = None,
     calibration_offset: Floats | None = None,
+    calibration_prior: Floats | None = None,
     links: Ints | None = None,
     link_sigma: float = 1e-3,
 ) -> System:
@@ -110,7 +115,8 @@ def make_system(
     kernels : per block, None for plain least squares
     sensitivity : robot -> (rows of its odometry block, dof, 3) derivative of the increment by
         translation scale, turn scale and lag; robots in it get a calibration vector
-    calibration_offset : (R, 3) present calibration minus its prior mean
+    calibration_offset, calibration_prior : (R, 3) present calibration minus its prior mean, and
+        the prior's standard deviations
     links : (k,) tracks whose own landmark is tied to the shared one that they claim
     """
     links = np.zeros(0, dtype=np.int64) if links is None else links
@@ -120,7 +126,9 @@ def make_system(
     layout = make_layout(problem, assignment, used, calibrated, links)
     tied = Links(links, assignment.landmark[links], problem.tracks.claim[links], link_sigma)
     parts = []
-    for block, rows, w, kernel in zip(problem.blocks, used, whiten, kernels, strict=True):
+    for at, (block, rows, w, kernel) in enumerate(
+        zip(problem.blocks, used, whiten, kernels, strict=True)
+    ):
         keep = rows
         landmark = None
         if block.kind in ("sighting", "control"):
@@ -133,7 +141,7 @@ def make_system(
         sub = block if whole else take_rows(block, index)
         landmark = None if landmark is None else landmark[index]
         key_b = sub.b if landmark is None else layout.key_of_landmark[landmark]
-        parts.append(Part(sub, index, w if whole else w[index], kernel, sub.a, key_b, landmark))
+        parts.append(Part(at, sub, index, w if whole else w[index], kernel, sub.a, key_b, landmark))
     pairs = [(p.key_a, p.key_b) for p in parts if p.block.kind not in ("fix", "gravity", "control")]
     pairs.append((layout.key_of_landmark[tied.own], layout.key_of_landmark[tied.shared]))
     n_tied = layout.n - int(calibrated.sum())
@@ -147,6 +155,7 @@ def make_system(
         tied,
         sensitivity,
         np.zeros((len(problem.robots), 3)) if calibration_offset is None else calibration_offset,
+        np.ones((len(problem.robots), 3)) if calibration_prior is None else calibration_prior,
     )
 
 
@@ -173,12 +182,7 @@ def linearise(system: System, part: Part, state: State, *, jacobians: bool = Tru
 def calibration_step(system: System, state: State, robot: int) -> Floats:
     """Change (3,) of a robot's odometry calibration since its odometry was integrated."""
     name = system.problem.robots[robot]
-    return np.array(
-        [
-            state.calibration.get((name, "", p), 0.0)
-            for p in ("odometry_scale", "odometry_turn_scale", "odometry_lag_s")
-        ]
-    )
+    return np.array([state.calibration.get((name, "", p), 0.0) for p in ODOMETRY_PARAMETERS])
 
 
 def whitened_norm(whitened: Floats) -> Floats:
@@ -243,7 +247,7 @@ def link_rows(system: System, state: State) -> list[Rows]:
 
 def _prior_residual(system: System, state: State, robot: int) -> Floats:
     now = system.calibration_offset[robot] + calibration_step(system, state, robot)
-    return now / system.calibration_prior
+    return now / system.calibration_prior[robot]
 
 
 @dataclass(frozen=True)
@@ -304,7 +308,7 @@ def linearise_system(system: System, state: State) -> LinearisedSystem:
         v = _prior_residual(system, state, robot)
         total += 0.5 * float(v @ v)
         key = np.array([system.layout.calibration_key[robot]])
-        graph.push(Rows([key], [np.diag(1.0 / system.calibration_prior)[None]], -v[None]))
+        graph.push(Rows([key], [np.diag(1.0 / system.calibration_prior[robot])[None]], -v[None]))
     k = system.layout.n_keyframes
     gauge = make_gauge(system.problem, state.poses[:k], system.component, absolute)
     for hold in gauge.rows:
@@ -358,6 +362,6 @@ def retract(system: System, state: State, delta: Floats) -> State:
     for robot in system.sensitivity:
         at = layout.offset[layout.calibration_key[robot]]
         name = system.problem.robots[robot]
-        for i, p in enumerate(("odometry_scale", "odometry_turn_scale", "odometry_lag_s")):
+        for i, p in enumerate(ODOMETRY_PARAMETERS):
             calibration[(name, "", p)] = calibration.get((name, "", p), 0.0) + float(delta[at + i])
     return State(poses, landmarks, orientations, calibration)

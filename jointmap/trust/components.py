@@ -19,7 +19,14 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.stats import chi2
 
-from jointmap.graph.noise import DEFAULT_SIGMA, FLOOR_SHARE, Noise, NoiseTerm, term_shapes, with_value
+from jointmap.graph.noise import (
+    DEFAULT_SIGMA,
+    FLOOR_SHARE,
+    Noise,
+    NoiseTerm,
+    term_shapes,
+    with_value,
+)
 from jointmap.graph.problem import Problem
 from jointmap.solve.system import Part, System
 from jointmap.trust.quality import PartQuality, Quality
@@ -48,14 +55,23 @@ def truncation_factor(dof: Floats, gate: float = GATE) -> Floats:
     return np.asarray(chi2.cdf(limit, np.maximum(dof, 1) + 2) / gate)
 
 
-def update_noise(problem: Problem, noise: Noise, system: System, quality: Quality) -> tuple[Noise, float]:
+def update_noise(
+    problem: Problem, noise: Noise, system: System, quality: Quality, *, first: bool = False
+) -> tuple[Noise, float]:
     """One update of every free term.
+
+    Parameters
+    ----------
+    first : the values in force may be far off: scale each block by the median of its statistics,
+        which no gate distorts
 
     Returns
     -------
     noise : with the new values; terms with too little redundancy keep theirs
     change : largest ratio of change of a sigma that is well determined
     """
+    if first:
+        return _scaled_by_median(problem, noise, system, quality), LARGEST_STEP
     sums: dict[tuple[str, str, str, str], _Sum] = {}
     for part, stats in zip(system.parts, quality.parts, strict=True):
         _add(sums, problem, noise, part, stats)
@@ -71,6 +87,28 @@ def update_noise(problem: Problem, noise: Noise, system: System, quality: Qualit
         sigma = value / np.sqrt(2.0 * total.redundancy)
         changed.append(with_value(total.term, value, sigma, total.redundancy))
     return noise.updated(changed), largest
+
+
+def _scaled_by_median(problem: Problem, noise: Noise, system: System, quality: Quality) -> Noise:
+    ratios: dict[tuple[str, str, str, str], list[tuple[float, int]]] = {}
+    terms: dict[tuple[str, str, str, str], NoiseTerm] = {}
+    for part, stats in zip(system.parts, quality.parts, strict=True):
+        t, dof = stats.statistic()
+        tested = dof > 0
+        if stats.numbers[tested].sum() < LEAST_REDUNDANCY:
+            continue
+        ratio = float(np.median(t[tested] / chi2.ppf(0.5, dof[tested])))
+        for term in term_shapes(part.block, problem, noise)[0]:
+            if term.free:
+                terms[term.key] = term
+                ratios.setdefault(term.key, []).append((ratio, int(tested.sum())))
+    changed = []
+    for key, found in ratios.items():
+        weights = np.array([n for _, n in found], dtype=np.float64)
+        scale = float(np.sqrt(np.average([r for r, _ in found], weights=weights)))
+        scale = float(np.clip(scale, 1 / LARGEST_STEP, LARGEST_STEP))
+        changed.append(with_value(terms[key], terms[key].value * scale, np.nan, np.nan))
+    return noise.updated(changed)
 
 
 def _add(

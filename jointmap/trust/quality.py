@@ -14,18 +14,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap.graph.problem import State
-from jointmap.solve.linear import Rows, eliminate
+from jointmap.solve.gauge import Gauge
+from jointmap.solve.linear import eliminate
 from jointmap.solve.system import System, linearise_system, link_rows, part_rows
 from jointmap.trust.elimination import clique_tree
 from jointmap.trust.marginals import SelectedInverse, selected_inverse_of
+from jointmap.trust.redundancy import UNCHECKED, redundancy_matrices
 from jointmap.trust.solve_pairs import SquareRootFactor
 
 Floats = NDArray[np.float64]
-
-#: Eigenvalues of R below this are directions that nothing else checks (CHECKS 2d: unchecked).
-UNCHECKED = 0.01
-#: Rows handled at a time, to bound the memory of the joint blocks.
-_CHUNK = 50_000
 
 
 @dataclass(frozen=True)
@@ -53,6 +50,7 @@ class PartQuality:
 class Quality:
     """Covariances at the inlier set and the quality of every used measurement and link."""
 
+    gauge: Gauge
     inverse: SelectedInverse
     factor: SquareRootFactor
     parts: tuple[PartQuality, ...]
@@ -70,7 +68,7 @@ def assess(system: System, state: State, ordering: object) -> Quality:
     parts = []
     for part in system.parts:
         rows, residual = part_rows(system, part, state)
-        parts.append(PartQuality(residual, _redundancy(rows, inverse)))
+        parts.append(PartQuality(residual, redundancy_matrices(rows.keys, rows.jacobians, inverse)))
     links = None
     tied = link_rows(system, state)
     if tied:
@@ -80,32 +78,6 @@ def assess(system: System, state: State, ordering: object) -> Quality:
         back = np.argsort(order)
         links = PartQuality(
             np.concatenate([-r.rhs for r in tied])[back],
-            np.concatenate([_redundancy(r, inverse) for r in tied])[back],
+            np.concatenate([redundancy_matrices(r.keys, r.jacobians, inverse) for r in tied])[back],
         )
-    return Quality(inverse, SquareRootFactor(tree), tuple(parts), links)
-
-
-def _redundancy(rows: Rows, inverse: SelectedInverse) -> Floats:
-    n, m = rows.rhs.shape
-    out = np.empty((n, m, m))
-    eye = np.eye(m)
-    for lo in range(0, n, _CHUNK):
-        hi = min(lo + _CHUNK, n)
-        out[lo:hi] = eye - predicted_covariance(
-            [k[lo:hi] for k in rows.keys], [j[lo:hi] for j in rows.jacobians], inverse
-        )
-    return out
-
-
-def predicted_covariance(
-    keys: list[NDArray[np.int64]], jacobians: list[Floats], inverse: SelectedInverse
-) -> Floats:
-    """``J Sigma J^T`` (n, m, m) of rows whose variables share a clique."""
-    n, m = jacobians[0].shape[:2]
-    total = np.zeros((n, m, m))
-    for i, (ki, ji) in enumerate(zip(keys, jacobians, strict=True)):
-        total += ji @ inverse.diagonal(ki) @ np.swapaxes(ji, 1, 2)
-        for kj, jj in zip(keys[i + 1 :], jacobians[i + 1 :], strict=True):
-            cross = ji @ inverse.pairs(ki, kj) @ np.swapaxes(jj, 1, 2)
-            total += cross + np.swapaxes(cross, 1, 2)
-    return total
+    return Quality(lin.gauge, inverse, SquareRootFactor(tree), tuple(parts), links)

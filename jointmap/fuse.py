@@ -1,0 +1,318 @@
+"""Survey -> Reference: calls the rooms in order and loops over them (noise, solve, vet, noise).
+
+1. build the graph; find start values and the frames of the robots without any truth;
+2. robust solve; then rounds of: solve the inlier set, assess it, re-estimate noise and odometry
+   calibration, review rows and associations, until nothing changes;
+3. the last assessment, at full weight, is what the products state.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from jointmap.errors import SurveyError
+from jointmap.graph.build import BuildSettings, build_problem
+from jointmap.graph.calibrate import (
+    Calibration,
+    calibrated_robots,
+    first_calibration,
+    odometry_sensitivity,
+    reintegrate,
+)
+from jointmap.graph.noise import Noise, initial_noise
+from jointmap.graph.problem import Problem, State
+from jointmap.graph.start import StartResult, initial_state
+from jointmap.ingest.survey import Survey
+from jointmap.products.assemble import assemble
+from jointmap.products.reference import Reference
+from jointmap.progress import Progress, Silent
+from jointmap.settings import Settings
+from jointmap.solve import kernels
+from jointmap.solve.associations import Evidence, Review, review
+from jointmap.solve.decisions import Decisions, gate_rows, statistic_scale
+from jointmap.solve.optimise import Optimised, OptimiseSettings, optimise
+from jointmap.solve.session import (
+    first_state,
+    system_of,
+    undetermined,
+    usable_rows,
+    whiten_blocks,
+)
+from jointmap.solve.system import System, whitened_norm, whitened_residual
+from jointmap.trust.components import update_noise
+from jointmap.trust.outcome import Outcome, association_evidence
+from jointmap.trust.quality import Quality, assess
+
+Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
+
+#: Noise has settled when no well-determined sigma changes by more than this factor in a round.
+SETTLED = 1.03
+
+
+@dataclass
+class _Run:
+    """What a fusion carries from step to step."""
+
+    survey: Survey
+    settings: Settings
+    progress: Progress
+    problem: Problem
+    noise: Noise
+    calibration: Calibration
+    start: StartResult
+    state: State
+    decisions: Decisions
+    review: Review | None = None
+    notes: list[str] = field(default_factory=list)
+
+
+def fuse(
+    survey: Survey, settings: Settings | None = None, progress: Progress | None = None
+) -> Reference:
+    """Fuse the logs of a team into one reference.
+
+    Parameters
+    ----------
+    survey : Survey
+        From :func:`jointmap.read_survey`.
+    settings : Settings, optional
+    progress : Progress, optional
+        Told about stages and iterations; silent by default.
+
+    Returns
+    -------
+    Reference
+        ``reference.status`` says whether it can be trusted as it is.
+
+    Raises
+    ------
+    SurveyError
+        The survey has nothing to solve.
+    """
+    settings = settings or Settings()
+    progress = progress or Silent()
+    run = _prepare(survey, settings, progress)
+    _robust(run)
+    settled = _rounds(run)
+    system, done, quality = _final(run)
+    progress.stage("products")
+    outcome = Outcome(
+        survey=survey,
+        problem=run.problem,
+        noise=run.noise,
+        calibration=run.calibration,
+        decisions=run.decisions,
+        review=run.review,
+        system=system,
+        state=done.state,
+        quality=quality,
+        start=run.start,
+        optimised=done,
+        settled=settled,
+        notes=tuple(run.notes),
+    )
+    reference = assemble(outcome, settings, progress)
+    progress.finish()
+    return reference
+
+
+def _prepare(survey: Survey, settings: Settings, progress: Progress) -> _Run:
+    progress.stage("build")
+    calibration = first_calibration(survey, enabled=settings.calibrate)
+    problem = build_problem(
+        survey,
+        BuildSettings(
+            settings.keyframe_merge_s,
+            settings.keyframe_spacing_s,
+            settings.gap_s,
+            settings.burst_gap_s,
+        ),
+        calibration.values,
+    )
+    if not any(b.kind == "odometry" for b in problem.blocks):
+        raise SurveyError("no robot has two odometry rows: there is no trajectory to solve")
+    noise = initial_noise(survey, problem)
+    progress.stage("start values")
+    start = initial_state(problem, noise)
+    accepted = start.track_accepted & (problem.tracks.claim >= 0) & ~problem.tracks.rejected
+    accepted |= problem.tracks.forced
+    state = first_state(problem, start.poses, start.points, start.turns, accepted)
+    usable = usable_rows(problem, state)
+    decisions = Decisions(accepted, usable, tuple(np.ones(b.n) for b in problem.blocks), usable)
+    run = _Run(
+        survey, settings, progress, problem, noise, calibration, start, state, decisions
+    )
+    _drop_loose(run)
+    return run
+
+
+def _drop_loose(run: _Run) -> None:
+    """Leave out sightings of landmarks that they cannot place."""
+    system = _system(run, robust=False)
+    loose = undetermined(run.problem, system, run.state)
+    if not len(loose):
+        return
+    usable = tuple(
+        rows & ~np.isin(b.b, loose) if b.kind == "sighting" else rows
+        for b, rows in zip(run.problem.blocks, run.decisions.usable, strict=True)
+    )
+    run.decisions = replace(run.decisions, usable=usable, used=usable)
+
+
+def _system(run: _Run, *, robust: bool, used: tuple[Bools, ...] | None = None) -> System:
+    kernel = None
+    if robust and run.settings.kernel != "none":
+        kernel = kernels.make(run.settings.kernel, run.settings.kernel_constant)
+    whiten = whiten_blocks(run.problem, run.noise)
+    sensitivity = odometry_sensitivity(run.problem, run.survey, run.calibration)
+    decisions = run.decisions if used is None else replace(run.decisions, used=used)
+    return system_of(
+        run.problem, whiten, decisions, run.state, kernel, sensitivity, run.calibration
+    )
+
+
+def _optimise(run: _Run, system: System, relative: float) -> Optimised:
+    counter = [0]
+
+    def report(text: str) -> None:
+        counter[0] += 1
+        run.progress.update(counter[0], text)
+
+    settings = OptimiseSettings(iterations=run.settings.max_iterations, relative=relative)
+    return optimise(system, run.state, settings, report=report)
+
+
+def _absorb(run: _Run, done: Optimised) -> float:
+    """Take over a solved state; its calibration step goes into the odometry itself.
+
+    Returns the largest step of a calibration value in units of its prior's sigma.
+    """
+    step = 0.0
+    if done.state.calibration:
+        run.calibration, step = run.calibration.moved(done.state.calibration)
+        run.problem = reintegrate(run.problem, run.survey, run.calibration, run.settings.gap_s)
+    run.state = replace(done.state, calibration={})
+    return step
+
+
+def _robust(run: _Run) -> None:
+    """Robust solves until the odometry calibration stands still, then a first inlier set."""
+    run.progress.stage("robust solve")
+    for _ in range(4 if calibrated_robots(run.calibration) else 1):
+        if _absorb(run, _optimise(run, _system(run, robust=True), 1e-4)) < 0.02:
+            break
+    _gate_by_norm(run, _system(run, robust=True))
+
+
+def _gate_by_norm(run: _Run, system: System) -> None:
+    """Inlier rows by residuals at the robust solution against their own sigma."""
+    used = [rows.copy() for rows in run.decisions.usable]
+    weight = [np.ones(len(rows)) for rows in used]
+    for part in system.parts:
+        norm2 = whitened_norm(whitened_residual(system, part, run.state)) ** 2
+        dof = np.full(len(norm2), float(part.whiten.shape[1]))
+        keep, weights = gate_rows(part.block, norm2, dof, run.settings.gate_measurement)
+        used[part.at][part.index] = keep
+        weight[part.at][part.index] = weights
+    run.decisions = replace(run.decisions, used=tuple(used), weight=tuple(weight))
+
+
+def _rounds(run: _Run) -> bool:
+    """Rounds of robust solve, assessment, noise, calibration and decisions.
+
+    Returns whether they settled.
+    """
+    estimate = run.settings.noise == "estimated" and any(t.free for t in run.noise.terms.values())
+    for number in range(run.settings.max_rounds):
+        run.progress.stage(f"round {number + 1}")
+        quality, system = _assess(run)
+        change = 1.0
+        if estimate:
+            run.noise, change = update_noise(
+                run.problem, run.noise, system, quality, first=number == 0
+            )
+        moved = _review(run, system, quality)
+        if not moved and change < SETTLED:
+            return True
+        step = _absorb(run, _optimise(run, _system(run, robust=True), 1e-4))
+        _gate_by_norm(run, _system(run, robust=True))
+        if not estimate and not moved and step < 0.02:
+            return True
+    return False
+
+
+def _assess(run: _Run) -> tuple[Quality, System]:
+    """Covariances at the present state and inlier set."""
+    system = _system(run, robust=False)
+    return assess(system, run.state), system
+
+
+def _review(run: _Run, system: System, quality: Quality) -> bool:
+    """Judge the associations anew; says whether any decision changed."""
+    evidence = association_evidence(run.problem, system, run.state, quality)
+    run.review = review(
+        run.problem.tracks, run.decisions.accepted, evidence, run.settings.gate_association
+    )
+    run.decisions = replace(run.decisions, accepted=run.review.accepted)
+    _place_shared(run)
+    return run.review.changed
+
+
+def _place_shared(run: _Run) -> None:
+    """Shared landmarks without a value take the place of the tracks that now claim them."""
+    shared = len(run.problem.tracks.landmarks)
+    refreshed = first_state(
+        run.problem,
+        run.state.poses,
+        run.state.landmarks[shared:],
+        None if run.state.orientations is None else run.state.orientations[shared:],
+        run.decisions.accepted,
+    )
+    run.state = replace(
+        run.state, landmarks=refreshed.landmarks, orientations=refreshed.orientations
+    )
+
+
+def _final(run: _Run) -> tuple[System, Optimised, Quality]:
+    """The inlier set at full weight; rows and associations are tested once more in it."""
+    run.progress.stage("final solve")
+    for number in range(run.settings.max_rounds):
+        system = _system(run, robust=False)
+        done = _optimise(run, system, 1e-9)
+        step = _absorb(run, done)
+        system = _system(run, robust=False)
+        quality = assess(system, run.state)
+        changed = _review_rows(run, system, quality)
+        changed |= _review(run, system, quality)
+        if (not changed and step < 1e-3) or number == run.settings.max_rounds - 1:
+            break
+    return system, replace(done, state=run.state), quality
+
+
+def _review_rows(run: _Run, system: System, quality: Quality) -> bool:
+    """Reject rows that the others contradict, take back those that agree after all."""
+    before = run.decisions.used
+    used = [rows.copy() for rows in before]
+    scales: dict[int, float] = {}
+    gate = run.settings.gate_measurement
+    for part, stats in zip(system.parts, quality.parts, strict=True):
+        if part.block.kind == "odometry":
+            continue
+        statistic, dof = stats.statistic()
+        scales[part.at] = statistic_scale(statistic, dof)
+        keep, _ = gate_rows(part.block, statistic, dof, gate, scales[part.at])
+        used[part.at][part.index] = keep
+    left = tuple(a & ~u for a, u in zip(run.decisions.usable, before, strict=True))
+    if any(rows.any() for rows in left):
+        outside = _system(run, robust=False, used=left)
+        for part in outside.parts:
+            norm2 = whitened_norm(whitened_residual(outside, part, run.state)) ** 2
+            dof = np.full(len(norm2), float(part.whiten.shape[1]))
+            keep, _ = gate_rows(part.block, norm2, dof, gate, scales.get(part.at, 1.0))
+            used[part.at][part.index] = keep
+    run.decisions = replace(run.decisions, used=tuple(used))
+    return any((a != b).any() for a, b in zip(before, used, strict=True))

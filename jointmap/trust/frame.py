@@ -1,0 +1,223 @@
+"""The frame and the datum of the result: coordinates moved, covariances transformed.
+
+``landmarks`` and ``robot`` start at the named robot's first pose; ``control`` stays in the frame
+of fixes and control points. One datum per component.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from jointmap import frames
+from jointmap.graph.problem import Problem, State
+from jointmap.solve.layout import n_landmarks
+from jointmap.solve.system import System
+from jointmap.trust.checked import Trust
+from jointmap.trust.datum import (
+    DatumTransform,
+    datum_transform,
+    null_space,
+    pose_weights,
+    position_weights,
+)
+from jointmap.trust.quality import Quality
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Expressed:
+    """State and covariances in the frame and datum asked for.
+
+    ``state`` moved; ``pose_cov`` (K, dof, dof) body tangents; ``next_cov`` (K, dof, dof) cross
+    covariance of each keyframe with the next one of its robot (zero at the last);
+    ``landmark_cov`` (L, d, d) with d = dof for oriented ones' own rows, NaN where absent;
+    ``carries`` (L,) landmarks that carry the datum; ``component`` (C,) anchors;
+    ``words`` says per component what the datum is.
+    """
+
+    state: State
+    pose_cov: Floats
+    next_cov: Floats
+    landmark_cov: Floats
+    carries: Bools
+    transform: DatumTransform
+    words: tuple[str, ...]
+
+
+def express(
+    problem: Problem,
+    system: System,
+    state: State,
+    quality: Quality,
+    trust: Trust,
+    kind: str,
+    robot: str,
+) -> Expressed:
+    """Move a solved state and its covariances into the datum ``kind``.
+
+    Parameters
+    ----------
+    kind : ``landmarks``, ``robot`` or ``control``
+    robot : the robot whose first pose is the origin (of its component; another component starts
+        at its own first robot)
+    """
+    gauge = quality.gauge
+    anchors = _anchors(problem, gauge.component, gauge.anchor, robot)
+    held = gauge.free == 0
+    to_site = held if kind == "control" else np.zeros(len(held), dtype=bool)
+    moved = _move(problem, system, state, gauge.component, anchors, to_site)
+    layout, k = system.layout, system.layout.n_keyframes
+    component = np.full(layout.n, -1, dtype=np.int64)
+    component[: len(gauge.component)] = gauge.component
+    weights, carries, words = _weights(
+        problem, system, trust, component, anchors, to_site, kind
+    )
+    null = _null(problem, system, moved)
+    site_rows = np.isin(np.repeat(component, layout.dims), np.flatnonzero(to_site))
+    null[site_rows] = 0.0
+    transform = datum_transform(quality.factor, component, null, weights)
+    keys = np.arange(k)
+    pose_cov = transform.diagonal(keys, quality.inverse.diagonal(keys))
+    next_cov = np.zeros_like(pose_cov)
+    tied = keys[:-1][np.diff(problem.keyframes.robot) == 0]
+    tied = tied[quality.inverse.shares_clique(tied, tied + 1)]
+    tied = tied[component[tied] == component[tied + 1]]
+    next_cov[tied] = transform.pairs(tied, tied + 1, quality.inverse.pairs(tied, tied + 1))
+    landmark_cov = _landmark_covariance(problem, system, quality, transform)
+    return Expressed(moved, pose_cov, next_cov, landmark_cov, carries, transform, words)
+
+
+def _anchors(problem: Problem, component: Ints, anchor: Ints, robot: str) -> Ints:
+    """First keyframe of the named robot in its component, else of the component's first robot."""
+    out = anchor.copy()
+    if robot in problem.robots:
+        first = problem.keyframes.first[problem.robots.index(robot)]
+        out[component[first]] = first
+    return out
+
+
+def _move(
+    problem: Problem,
+    system: System,
+    state: State,
+    component: Ints,
+    anchors: Ints,
+    to_site: Bools,
+) -> State:
+    group = frames.group(problem.dimension)
+    k = system.layout.n_keyframes
+    origin = state.poses[anchors]
+    if problem.dimension == 3 and problem.gravity_aligned:
+        origin = upright(origin)
+    shift = group.inverse(origin)
+    shift[to_site] = group.identity(1)[0]
+    poses = group.compose(shift[component[:k]], state.poses[:k])
+    landmarks = state.landmarks.copy()
+    index = system.layout.landmark_of_key
+    mine = shift[component[k : k + len(index)]]
+    landmarks[index] = group.transform(mine, state.landmarks[index])
+    orientations = state.orientations
+    if orientations is not None:
+        orientations = orientations.copy()
+        orientations[index] = group.rotation(mine) @ orientations[index]
+    return replace(state, poses=poses, landmarks=landmarks, orientations=orientations)
+
+
+def upright(poses: Floats) -> Floats:
+    """Poses (n, 3, 4) with roll and pitch taken out, heading and position kept."""
+    yaw = np.arctan2(poses[:, 1, 0], poses[:, 0, 0])
+    out = np.zeros_like(poses)
+    out[:, 0, 0] = out[:, 1, 1] = np.cos(yaw)
+    out[:, 1, 0], out[:, 0, 1] = np.sin(yaw), -np.sin(yaw)
+    out[:, 2, 2] = 1.0
+    out[:, :, 3] = poses[:, :, 3]
+    return out
+
+
+def _null(problem: Problem, system: System, state: State) -> Floats:
+    layout, k = system.layout, system.layout.n_keyframes
+    group = frames.group(problem.dimension)
+    index = layout.landmark_of_key
+    oriented = system.oriented[index]
+    keys = k + np.arange(len(index))
+    pose_keys = np.concatenate([np.arange(k), keys[oriented]])
+    poses = state.poses[:k]
+    if oriented.any():
+        assert state.orientations is not None
+        tags = group.build(state.orientations[index[oriented]], state.landmarks[index[oriented]])
+        poses = np.concatenate([poses, tags])
+    return null_space(
+        layout.dims,
+        problem.dimension,
+        problem.gravity_aligned,
+        (pose_keys, poses),
+        (keys[~oriented], state.landmarks[index[~oriented]]),
+    )
+
+
+def _weights(
+    problem: Problem,
+    system: System,
+    trust: Trust,
+    component: Ints,
+    anchors: Ints,
+    to_site: Bools,
+    kind: str,
+) -> tuple[Floats, Bools, tuple[str, ...]]:
+    layout, k = system.layout, system.layout.n_keyframes
+    need = 2 if problem.dimension == 2 else 3
+    carries = np.zeros(n_landmarks(problem), dtype=bool)
+    weights = np.zeros(int(layout.dims.sum()))
+    words = []
+    index = layout.landmark_of_key
+    # A linked track's own landmark is the shared one once more; it must not count twice.
+    single = ~np.isin(index, system.links.own)
+    good = (trust.keyframes_seeing[index] >= 2) & single
+    part = component[k : k + len(index)]
+    for c, anchor in enumerate(anchors):
+        if to_site[c]:
+            words.append("the frame of the fixes and control points")
+            continue
+        name = problem.robots[problem.keyframes.robot[anchor]]
+        mine = np.flatnonzero(good & (part == c))
+        if kind == "robot":
+            weights += pose_weights(layout.dims, np.array([anchor]))
+            words.append(f"the first pose of {name} is exact")
+        elif len(mine) >= need:
+            weights += position_weights(layout.dims, problem.dimension, k + mine)
+            carries[index[mine]] = True
+            words.append(
+                f"inner constraints over {len(mine)} landmarks, coordinates from the first pose of {name}"
+            )
+        else:
+            keys = np.flatnonzero(component[:k] == c)
+            weights += position_weights(layout.dims, problem.dimension, keys)
+            words.append(
+                "inner constraints over the keyframes, since fewer than "
+                f"{need} landmarks are seen often enough; coordinates from the first pose of {name}"
+            )
+    carries[system.links.own] = False
+    return weights, carries, tuple(words)
+
+
+def _landmark_covariance(
+    problem: Problem, system: System, quality: Quality, transform: DatumTransform
+) -> Floats:
+    layout, k = system.layout, system.layout.n_keyframes
+    index = layout.landmark_of_key
+    dof = 3 if problem.dimension == 2 else 6
+    out = np.full((n_landmarks(problem), dof, dof), np.nan)
+    for poses in (False, True):
+        rows = np.flatnonzero(system.oriented[index] == poses)
+        if not len(rows):
+            continue
+        keys = k + rows
+        d = dof if poses else problem.dimension
+        out[index[rows], :d, :d] = transform.diagonal(keys, quality.inverse.diagonal(keys))
+    return out
