@@ -127,6 +127,16 @@ def recover(path: Path | str) -> str | None:
         return None
 
 
+def check_free(path: Path | str, *, replace: bool, marker: str) -> None:
+    """Raise what :func:`new_folder` would raise, before long work instead of after it.
+
+    Raises
+    ------
+    OutputExistsError
+    """
+    _refuse(Path(os.path.realpath(path)), replace, marker)
+
+
 def _refuse(target: Path, replace: bool, marker: str) -> None:
     """Raise unless a result may go to ``target``; an empty folder counts as nothing."""
     if not os.path.lexists(target):

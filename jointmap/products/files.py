@@ -71,7 +71,7 @@ def write_reference(reference: Reference, path: Path | str, replace: bool = Fals
         with open(folder / "state.npz", "wb") as file:
             # A written array with objects would need pickle to come back; refuse it here.
             np.savez_compressed(file, allow_pickle=False, **dict(reference.state))
-        write_json(reference.meta, folder / MARKER)
+        (folder / MARKER).write_text(json_text(reference.meta) + "\n", encoding="utf-8")
     return Path(path)
 
 
@@ -125,10 +125,9 @@ def write_csv(frame: pd.DataFrame, path: Path) -> None:
     )
 
 
-def write_json(values: Mapping[str, Any], path: Path) -> None:
+def json_text(values: Mapping[str, Any]) -> str:
     """Strict JSON: what is not finite becomes null, NumPy's numbers and paths plain ones."""
-    text = json.dumps(_plain(values), indent=2, allow_nan=False, ensure_ascii=False)
-    path.write_text(text + "\n", encoding="utf-8")
+    return json.dumps(_plain(values), indent=2, allow_nan=False, ensure_ascii=False)
 
 
 def _plain(value: Any) -> Any:

@@ -95,7 +95,7 @@ def _inputs(reference: Reference, width: int) -> list[str]:
         ]
         for robot, path in reference.trajectories.items()
     ]
-    header = ["robot", "odometry rows", "time", "path", "sightings", "encounters", "fixes"]
+    header = ["robot", "odometry", "time", "path", "sightings", "encounters", "fixes"]
     n = reference.landmarks["n_robots"]
     marks = count(len(n), "landmark")
     shared = f"{marks}, {int((n > 1).sum()):,} of them used by more than one robot."

@@ -1,0 +1,313 @@
+"""Commands, and nothing else: arguments, calls, what is printed, exit codes.
+
+Everything heavy is imported inside the command that needs it, so that ``--help`` is instant.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import os
+import shutil
+import signal
+import sys
+import traceback
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from types import FrameType
+from typing import TYPE_CHECKING, NoReturn
+
+from jointmap import __version__
+from jointmap.errors import JointMapError, LogFormatError
+from jointmap.settings import DATUMS, KERNELS, NOISE_MODES, Settings
+
+if TYPE_CHECKING:
+    from jointmap.products.reference import Reference
+    from jointmap.settings import DatumKind, Kernel, NoiseMode
+
+OK, FAULT, REFUSED, DOUBTFUL, INTERRUPTED = 0, 1, 2, 3, 130
+
+_EXIT_CODES = """exit codes:
+  0    done
+  1    a fault of this program
+  2    the input or the command line was refused
+  3    done, but not to be trusted as it is; the last line says why
+  130  interrupted
+"""
+_FORMATS = "CSV, .csv.gz or Parquet, by its name"
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run one command.
+
+    Returns
+    -------
+    int
+        Exit code; argparse itself raises SystemExit(2) on wrong usage and (0) after ``--help``.
+    """
+    signal.signal(signal.SIGTERM, _interrupt)
+    given = list(sys.argv[1:] if arguments is None else arguments)
+    args = _parser(given).parse_args(given)
+    run: Callable[[argparse.Namespace], int] = args.run
+    try:
+        code = run(args)
+        sys.stdout.flush()
+        return code
+    except BrokenPipeError:
+        # The reader of a pipe went away (`| head`); what was to be written to disk is written.
+        _abandon_stdout()
+        return OK
+    except JointMapError as error:
+        _refuse(error, as_json=getattr(args, "json", False))
+        return REFUSED
+    except KeyboardInterrupt:
+        print("interrupted: no result was written", file=sys.stderr)
+        return INTERRUPTED
+    except Exception as error:
+        _fault(error)
+        return FAULT
+
+
+def _interrupt(signum: int, frame: FrameType | None) -> NoReturn:
+    # The same way out as Ctrl-C: every `finally` on it runs.
+    raise KeyboardInterrupt
+
+
+def _abandon_stdout() -> None:
+    """Keep the interpreter from flushing into the closed pipe once more at its end."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def _refuse(error: JointMapError, *, as_json: bool) -> None:
+    """Say what was refused: every problem of the logs, or the message."""
+    problems = error.problems if isinstance(error, LogFormatError) else ()
+    if as_json:
+        from jointmap.products.check_page import refusal_summary
+
+        print(json.dumps(refusal_summary(problems, str(error)), indent=2, ensure_ascii=False))
+    refused = [p for p in problems if not p.mended]
+    for problem in problems:
+        print(problem, file=sys.stderr)
+    if refused:
+        n = len(refused)
+        summary = f"the input was refused: {n} problem{'s' if n > 1 else ''} to mend"
+    else:
+        summary = str(error)
+    print(f"jointmap: {summary}", file=sys.stderr)
+
+
+def _fault(error: Exception) -> None:
+    if os.environ.get("JOINTMAP_TRACEBACK", "0") not in ("", "0"):
+        traceback.print_exc()
+    kind = type(error).__name__
+    print(f"jointmap: this is a fault of the program ({kind}: {error})", file=sys.stderr)
+    if os.environ.get("JOINTMAP_TRACEBACK", "0") in ("", "0"):
+        print("set JOINTMAP_TRACEBACK=1 to see where it happened", file=sys.stderr)
+
+
+def _parser(given: Sequence[str]) -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="jointmap",
+        description="Fuse the logs of a robot team into one reference that knows how good it is.",
+        epilog=_EXIT_CODES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    parser.add_argument("--version", action="version", version=f"jointmap {__version__}")
+    commands = parser.add_subparsers(title="commands", metavar="COMMAND", required=True)
+    chosen = next((word for word in given if not word.startswith("-")), "")
+    for name, (fill, text) in _COMMANDS.items():
+        command = commands.add_parser(name, help=text, description=text[0].upper() + text[1:] + ".")
+        # Only the chosen command fetches its options: those of `simulate` cost an import.
+        if name == chosen:
+            fill(command)
+    return parser
+
+
+def _add_replace(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("--replace", action="store_true", help="replace an earlier result")
+
+
+def _fill_simulate(parser: argparse.ArgumentParser) -> None:
+    from jointmap.simulate.options import add_arguments
+
+    parser.add_argument("world", choices=("quarry-2d", "quarry-3d"), help="which world")
+    parser.add_argument("--out", type=Path, required=True, metavar="SURVEY", help="folder to write")
+    parser.add_argument("--seed", type=int, default=0, metavar="N", help="seed (default: 0)")
+    _add_replace(parser)
+    add_arguments(parser)
+    parser.set_defaults(run=_simulate)
+
+
+def _simulate(args: argparse.Namespace) -> int:
+    from jointmap.atomic import recover
+    from jointmap.simulate.options import settings_from
+    from jointmap.simulate.run import simulate
+
+    _tell(recover(args.out))
+    settings = settings_from(args)
+    report = simulate(args.world, args.out, settings, seed=args.seed, replace=args.replace)
+    print("\n".join(report.lines()))
+    return OK
+
+
+def _fill_import(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("format", choices=("mrclam",), help="layout of the logs")
+    parser.add_argument("folder", type=Path, metavar="FOLDER", help="folder with the logs")
+    parser.add_argument("--out", type=Path, required=True, metavar="SURVEY", help="folder to write")
+    _add_replace(parser)
+    parser.set_defaults(run=_import)
+
+
+def _import(args: argparse.Namespace) -> int:
+    from jointmap.atomic import recover
+    from jointmap.ingest.mrclam import import_mrclam
+
+    _tell(recover(args.out))
+    report = import_mrclam(args.folder, args.out, replace=args.replace)
+    print("\n".join(report.lines()))
+    return OK
+
+
+def _fill_check(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("survey", type=Path, metavar="SURVEY", help="survey folder")
+    parser.add_argument("--json", action="store_true", help="print JSON")
+    parser.set_defaults(run=_check)
+
+
+def _check(args: argparse.Namespace) -> int:
+    from jointmap.atomic import recover
+    from jointmap.ingest import read_survey
+    from jointmap.products.check_page import check_page, check_summary
+
+    _tell(recover(args.survey))
+    survey = read_survey(args.survey)
+    if args.json:
+        print(json.dumps(check_summary(survey), indent=2, ensure_ascii=False))
+    else:
+        print(check_page(survey, _width()), end="")
+    return OK
+
+
+def _fill_fuse(parser: argparse.ArgumentParser) -> None:
+    default = Settings()
+    parser.add_argument("survey", type=Path, metavar="SURVEY", help="survey folder")
+    parser.add_argument(
+        "--out", type=Path, required=True, metavar="REFERENCE", help="folder to write"
+    )
+    _add_replace(parser)
+    parser.add_argument("--datum", choices=DATUMS, help="default: as survey.toml says")
+    parser.add_argument("--robot", metavar="NAME", help="robot that the datum starts at")
+    parser.add_argument(
+        "--kernel", choices=KERNELS, default=default.kernel, help=f"default: {default.kernel}"
+    )
+    parser.add_argument(
+        "--noise", choices=NOISE_MODES, default=default.noise, help=f"default: {default.noise}"
+    )
+    parser.add_argument("--seed", type=int, default=default.seed, metavar="N", help="default: 0")
+    parser.add_argument("--json", action="store_true", help="print reference.json, not the page")
+    parser.add_argument("--quiet", action="store_true", help="print only what needs attention")
+    parser.set_defaults(run=_fuse)
+
+
+def _fuse(args: argparse.Namespace) -> int:
+    from jointmap.atomic import check_free, recover
+    from jointmap.fuse import fuse
+    from jointmap.ingest import read_survey
+    from jointmap.products.files import MARKER, write_reference
+    from jointmap.progress import choose
+
+    settings = _settings(args)
+    _tell(recover(args.out))
+    # Said before hours of work, not after them.
+    check_free(args.out, replace=args.replace, marker=MARKER)
+    progress = choose(quiet=args.quiet or args.json)
+    try:
+        progress.stage("read")
+        survey = read_survey(args.survey)
+        reference = fuse(survey, settings, progress)
+        write_reference(reference, args.out, replace=args.replace)
+    finally:
+        progress.finish()
+    _show(reference, args)
+    return OK if reference.status == "ok" else DOUBTFUL
+
+
+def _settings(args: argparse.Namespace) -> Settings:
+    kernel: Kernel = args.kernel
+    datum: DatumKind | None = args.datum
+    noise: NoiseMode = args.noise
+    return Settings(
+        kernel=kernel, datum=datum, datum_robot=args.robot, noise=noise, seed=args.seed
+    )
+
+
+def _show(reference: Reference, args: argparse.Namespace) -> None:
+    from jointmap.products.files import json_text
+    from jointmap.products.page import fuse_page, status_line
+
+    if args.json:
+        print(json_text(reference.meta))
+        if reference.status != "ok":
+            print(status_line(reference), file=sys.stderr)
+    elif not args.quiet:
+        print(_styled(fuse_page(reference, _width(), args.out)), end="")
+    elif reference.status != "ok":
+        print(status_line(reference))
+
+
+def _fill_poses(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("reference", type=Path, metavar="REFERENCE", help="reference folder")
+    parser.add_argument(
+        "--at", type=Path, required=True, metavar="FILE", help=f"columns robot, t_s; {_FORMATS}"
+    )
+    parser.add_argument(
+        "--out", type=Path, required=True, metavar="FILE", help=f"what to write; {_FORMATS}"
+    )
+    _add_replace(parser)
+    parser.set_defaults(run=_poses)
+
+
+def _poses(args: argparse.Namespace) -> int:
+    from jointmap.products.files import read_reference
+    from jointmap.products.stamps import answer, read_stamps, write_table
+
+    reference = read_reference(args.reference)
+    stamps = read_stamps(args.at, tuple(reference.trajectories))
+    answers = answer(reference, stamps)
+    write_table(answers, args.out, replace=args.replace)
+    unknown = int(answers["reason"].ne("").sum())
+    print(f"{len(answers):,} poses written to {args.out}")
+    if unknown:
+        print(f"{unknown:,} of them are incomplete; the column reason says why")
+    return OK
+
+
+_COMMANDS: dict[str, tuple[Callable[[argparse.ArgumentParser], None], str]] = {
+    "simulate": (_fill_simulate, "write a survey of a made-up quarry, with its truth"),
+    "import": (_fill_import, "write a survey from logs in another layout"),
+    "check": (_fill_check, "read a survey and say what is in it and what is wrong with it"),
+    "fuse": (_fill_fuse, "fuse a survey into a reference"),
+    "poses": (_fill_poses, "pose and covariance of robots at given stamps"),
+}
+
+
+def _tell(done: str | None) -> None:
+    """Say what the recovery of a broken replacement did."""
+    if done:
+        print(f"jointmap: {done}", file=sys.stderr)
+
+
+def _width() -> int:
+    return min(max(shutil.get_terminal_size((80, 24)).columns, 60), 100)
+
+
+def _styled(page: str) -> str:
+    """Titles in bold on a terminal that may have colours (NO_COLOR is respected)."""
+    plain = os.environ.get("NO_COLOR") or os.environ.get("TERM", "") in ("", "dumb")
+    if plain or not sys.stdout.isatty():
+        return page
+    titles = (
+        f"\033[1m{line}\033[0m" if line[:1].isalpha() and line[-1:].isalpha() else line
+        for line in page.splitlines()
+    )
+    return "\n".join(titles) + "\n"

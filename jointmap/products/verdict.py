@@ -1,0 +1,169 @@
+"""The verdict on a reference: status, reasons and what to distrust, in plain words."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from jointmap.settings import Settings
+from jointmap.trust.outcome import Outcome
+
+#: Shares beyond which a reference is called weak or inconsistent (design choices, no source).
+UNCHECKED_SHARE = 0.5
+REJECTED_MEASUREMENTS = 0.2
+REJECTED_ASSOCIATIONS = 0.5
+#: Median statistic over its law beyond which stated sigmas are called wrong.
+STATED_FACTOR = 4.0
+
+
+@dataclass(frozen=True)
+class Judged:
+    """``status`` with its ``reasons``; ``distrust`` first things first; ``links`` between robots."""
+
+    status: str
+    reasons: tuple[str, ...]
+    distrust: tuple[str, ...]
+    links: tuple[Mapping[str, Any], ...]
+    evidence: Mapping[str, Any]
+
+
+def judge(
+    outcome: Outcome,
+    settings: Settings,
+    robots: pd.DataFrame,
+    landmarks: pd.DataFrame,
+    associations: pd.DataFrame,
+    measurements: pd.DataFrame,
+    suspects: pd.DataFrame,
+) -> Judged:
+    """Status of the reference, most serious reason first."""
+    reasons: list[tuple[str, str]] = []
+    n_parts = robots["component"].nunique()
+    if n_parts > 1:
+        parts = robots.groupby("component")["robot"].apply(lambda names: ", ".join(names))
+        text = " | ".join(parts)
+        reasons.append(
+            ("disconnected", f"nothing ties these groups of robots to each other: {text}")
+        )
+    if not outcome.optimised.converged:
+        reasons.append(("not-converged", "the final solve did not converge"))
+    if not outcome.settled:
+        reasons.append(("weak", "noise and decisions had not settled after the last round"))
+    reasons += _rejections(associations, measurements)
+    for name, factor in _stated(outcome).items():
+        reasons.append(
+            (
+                "inconsistent",
+                f"residuals of {name} are {factor:.1f} times what its stated sigmas allow; "
+                "remove them from survey.toml to have them estimated",
+            )
+        )
+    for link in outcome.start.links:
+        if link.ambiguous:
+            reasons.append(
+                (
+                    "weak",
+                    f"the frames of {link.robot_a} and {link.robot_b} could be tied another way "
+                    f"({link.support} against {link.runner_up} agreements)",
+                )
+            )
+    lost = robots.loc[robots["share_unchecked"] > UNCHECKED_SHARE, "robot"]
+    for name in lost:
+        reasons.append(("weak", f"most of the path of {name} is dead reckoning that nothing checks"))
+    order = ("not-converged", "inconsistent", "disconnected", "weak")
+    status = next((s for s in order if any(r[0] == s for r in reasons)), "ok")
+    reasons.sort(key=lambda r: order.index(r[0]))
+    return Judged(
+        status,
+        tuple(text for _, text in reasons),
+        _distrust(outcome, robots, landmarks, suspects),
+        tuple(_links(outcome)),
+        {"settled": outcome.settled, "association_scale": _scale(outcome)},
+    )
+
+
+def _scale(outcome: Outcome) -> float | None:
+    return None if outcome.review is None else float(outcome.review.scale)
+
+
+def _rejections(associations: pd.DataFrame, measurements: pd.DataFrame) -> list[tuple[str, str]]:
+    out = []
+    tested = associations[associations["verdict"].isin(["kept", "rejected"])]
+    for name, rows in tested.groupby("robot"):
+        share = float((rows["verdict"] == "rejected").mean())
+        if share > REJECTED_ASSOCIATIONS and len(rows) >= 4:
+            out.append(("weak", f"{share:.0%} of the associations of {name} were rejected"))
+    rows = measurements[measurements["kind"].isin(["sighting", "encounter", "closure", "fix"])]
+    for (name, kind), group in rows.groupby(["robot", "kind"]):
+        share = float((group["verdict"] == "rejected").mean())
+        if share > REJECTED_MEASUREMENTS and len(group) >= 20:
+            out.append(("weak", f"{share:.0%} of the {kind}s of {name} were rejected"))
+    return out
+
+
+def _stated(outcome: Outcome) -> dict[str, float]:
+    """Blocks whose stated sigmas the residuals contradict."""
+    out: dict[str, float] = {}
+    for part, stats in zip(outcome.system.parts, outcome.quality.parts, strict=True):
+        t, dof = stats.statistic()
+        block = part.block
+        name = outcome.problem.robots[block.robot] if block.robot >= 0 else "control"
+        free = any(
+            term.free
+            for key, term in outcome.noise.terms.items()
+            if key[0] == name and key[1] == (block.sensor or block.kind)
+        )
+        free |= block.kind == "odometry"
+        if free or (dof > 0).sum() < 50:
+            continue
+        factor = float(np.sqrt(np.median(t[dof > 0] / np.maximum(dof[dof > 0], 1)) / 0.7))
+        if factor > STATED_FACTOR:
+            what = f"{name}'s {block.kind}s" + (f" by {block.sensor}" if block.sensor else "")
+            out[what] = max(out.get(what, 0.0), factor)
+    return out
+
+
+def _distrust(
+    outcome: Outcome, robots: pd.DataFrame, landmarks: pd.DataFrame, suspects: pd.DataFrame
+) -> tuple[str, ...]:
+    out = []
+    for row in robots.itertuples():
+        if row.share_unchecked > 0.02:
+            out.append(
+                f"{row.robot}: {row.share_unchecked:.0%} of its path is dead reckoning that "
+                "nothing checks (before its first or after its last useful observation)"
+            )
+        if row.share_weak > 0.05:
+            out.append(f"{row.robot}: {row.share_weak:.0%} of its path is only weakly checked")
+    loose = landmarks[landmarks["trust"] == "unchecked"]
+    if len(loose):
+        names = ", ".join(loose["landmark"].head(5))
+        more = f" and {len(loose) - 5} more" if len(loose) > 5 else ""
+        out.append(f"{len(loose)} landmarks that no second look checks: {names}{more}")
+    weak = landmarks[landmarks["trust"] == "weak"]
+    if len(weak):
+        out.append(f"{len(weak)} landmarks that are only weakly checked")
+    out += list(outcome.problem.notes) + list(outcome.start.notes) + list(outcome.notes)
+    out.append(
+        "the stated sigmas assume errors that are independent from one sighting to the next; "
+        "errors shared by a burst make the reference less sure than it says"
+    )
+    return tuple(out)
+
+
+def _links(outcome: Outcome) -> list[Mapping[str, Any]]:
+    return [
+        {
+            "robot_a": link.robot_a,
+            "robot_b": link.robot_b,
+            "kind": link.kind,
+            "support": int(link.support),
+            "runner_up": int(link.runner_up),
+            "ambiguous": bool(link.ambiguous),
+        }
+        for link in outcome.start.links
+    ]
