@@ -127,7 +127,13 @@ def _landmark_block(
             raise ValueError("a pose was observed of a landmark that has no orientation")
         tag = group.build(known.rotation, known.position)
         return relative_pose(
-            group, block.obs, poses[block.a], block.frame_a, tag, group.identity(1), jacobians=jacobians
+            group,
+            block.obs,
+            poses[block.a],
+            block.frame_a,
+            tag,
+            group.identity(1),
+            jacobians=jacobians,
         )
     if block.kind == "control":
         value, by_point = control_position(known.position)
@@ -149,9 +155,7 @@ def _landmark_block(
 
 def _compare(block: Block, seen: Prediction) -> Linearised:
     """Residual of a prediction against what the block observed."""
-    return Linearised(
-        residual(block.components, block.obs, seen.value), seen.d_pose, seen.d_target
-    )
+    return Linearised(residual(block.components, block.obs, seen.value), seen.d_pose, seen.d_target)
 
 
 def _by_tangent(group: Group, by_point: Floats, known: _Landmarks) -> Floats:

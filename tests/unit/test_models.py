@@ -79,8 +79,8 @@ def _scene(g: Group, rng: np.random.Generator, kind: Kind, name: str) -> dict[st
     if pose_valued:
         empty = np.broadcast_to(g.identity(1), empty.shape).copy()
     block = Block(
-        kind, 0, "front", components, a, b, empty, frame_a, frame_b, np.zeros((ROWS, 1)), None, None,
-        np.arange(ROWS, dtype=float), Provenance((), np.zeros(ROWS, int), np.arange(ROWS)), b,
+        kind, 0, "front", components, a, b, empty, frame_a, frame_b, np.zeros((ROWS, 1)), None,
+        None, np.zeros(ROWS), Provenance((), np.zeros(ROWS, int), np.arange(ROWS)), b,
     )  # fmt: skip
     scene = {"poses": poses, "landmarks": landmarks, "orientations": orientations, "block": block}
     if name == "tilt":
