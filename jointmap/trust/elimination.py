@@ -60,13 +60,25 @@ def eliminate(graph: Any, ordering: Any = None) -> Any:
     Raises
     ------
     SingularSystemError
-        A pivot is not positive; carries the key that GTSAM names.
+        The system is singular; carries the key at which that showed.
+
+    Notes
+    -----
+    GTSAM's Cholesky refuses a clique whose last two pivots differ by more than 2^12, which
+    determined systems do too (precise translation, poor heading, a long way from anything known).
+    So its refusal only decides that QR is tried; whether that leaves a pivot is the judgement.
     """
     order = metis_ordering(graph) if ordering is None else ordering
     try:
         return graph.eliminateMultifrontal(order)
+    except RuntimeError:
+        pass
+    try:
+        bayes_tree = graph.eliminateMultifrontal(order, gtsam.EliminateQR)
     except RuntimeError as failure:
         raise SingularSystemError(_key_in(str(failure))) from failure
+    clique_tree(bayes_tree, _dimensions(graph))
+    return bayes_tree
 
 
 def clique_tree(bayes_tree: Any, dims: ArrayLike) -> CliqueTree:
@@ -173,6 +185,15 @@ def _information(graph: Any, dims: Ints) -> NDArray[np.float64]:
         np.add.at(total, keys, np.add.reduceat(diagonal, ends - dims[keys]))
     mean = total / dims
     return np.where(mean > 0.0, mean, mean[mean > 0.0].mean() if np.any(mean > 0.0) else 1.0)
+
+
+def _dimensions(graph: Any) -> Ints:
+    """Dimension of every key 0 .. largest, 0 for keys without a factor."""
+    gradient = graph.gradientAtZero()
+    keys = np.array(list(graph.keyVector()), np.int64)
+    dims = np.zeros(int(keys.max(initial=-1)) + 1, np.int64)
+    dims[keys] = [len(gradient.at(key)) for key in keys.tolist()]
+    return dims
 
 
 def _key_in(message: str) -> int:

@@ -81,7 +81,7 @@ def redundancy_numbers(matrices: Floats) -> Floats:
 
 def group_sums(group: Ints, values: Floats, n_groups: int) -> Floats:
     """Sum of values (n,) by group (n,) -> (n_groups,)."""
-    return np.bincount(group, weights=values, minlength=n_groups)
+    return np.bincount(group, weights=values, minlength=n_groups).astype(np.float64)
 
 
 @dataclass(frozen=True)

@@ -23,6 +23,8 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.stats import chi2
 
+from jointmap.trust.redundancy import group_sums
+
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
@@ -123,9 +125,9 @@ def variance_factors(
     """
     r = np.asarray(redundancy, np.float64)
     share = np.broadcast_to(truncation_factor(dof_per_row, gate_probability), r.shape)
-    total = np.bincount(group, weights=r, minlength=n_groups)
-    expected = np.bincount(group, weights=r * share, minlength=n_groups)
-    seen = np.bincount(group, weights=np.asarray(v2_whitened, np.float64), minlength=n_groups)
+    total = group_sums(group, r, n_groups)
+    expected = group_sums(group, r * share, n_groups)
+    seen = group_sums(group, np.asarray(v2_whitened, np.float64), n_groups)
     known = total >= least_redundancy
     s2 = np.where(known, seen / np.where(known, expected, 1.0), np.nan)
     return s2, np.sqrt(s2 / (2.0 * np.where(known, total, np.nan))), total

@@ -211,3 +211,27 @@ def test_loose_variable_is_found_even_when_elimination_blames_a_neighbour():
     with pytest.raises(SingularSystemError):
         clique_tree(eliminate(graph), dims)
     assert loose_keys(graph, dims).tolist() == [20]
+
+
+def test_stiff_but_determined_chain_is_solved():
+    """Precise steps, poor heading: GTSAM's own test of pivots calls this one singular."""
+    graph, values = gtsam.NonlinearFactorGraph(), gtsam.Values()
+    sigma = np.array([1e-6, 1e-6, 1e-2])
+    noise = gtsam.noiseModel.Diagonal.Sigmas(sigma)
+    graph.add(gtsam.PriorFactorPose2(0, gtsam.Pose2(), gtsam.noiseModel.Isotropic.Sigma(3, 0.01)))
+    for i in range(200):
+        values.insert(i, gtsam.Pose2(i, 0, 0))
+        if i:
+            graph.add(gtsam.BetweenFactorPose2(i - 1, i, gtsam.Pose2(1, 0, 0), noise))
+    linear = graph.linearize(values)
+    order = gtsam.Ordering.NaturalGaussianFactorGraph(linear)
+    with pytest.raises(RuntimeError, match="ndetermina"):
+        linear.eliminateMultifrontal(order)
+    end = selected_inverse(eliminate(linear, order), np.full(200, 3)).diagonal([199])[0]
+    # Step k (1 .. 199) turns what follows it; a straight line, so the sums are exact.
+    arms = 199.0 - np.arange(200)
+    heading = 1e-4 + 199 * sigma[2] ** 2
+    across = 1e-4 + 1e-4 * 199.0**2 + sigma[2] ** 2 * np.sum(arms[1:] ** 2) + 199 * sigma[1] ** 2
+    along = 1e-4 + 199 * sigma[0] ** 2
+    # R's diagonal spans 1e9, and the recursion loses that many digits of sixteen.
+    np.testing.assert_allclose(np.diagonal(end), [along, across, heading], rtol=1e-6)
