@@ -80,11 +80,10 @@ def _from_accumulated(rows: Floats, accumulated: Floats, dimension: int) -> RowN
         back = group.adjoint(group.between(pose[1:], pose[:-1]))
         grown = body[1:] - back @ body[:-1] @ np.swapaxes(back, -1, -2)
         grown = 0.5 * (grown + np.swapaxes(grown, -1, -2))
-        finite = np.isfinite(grown).all(axis=(1, 2))
+        finite = np.asarray(np.isfinite(grown).all(axis=(1, 2)), dtype=bool)
         smallest = np.linalg.eigvalsh(np.where(finite[:, None, None], grown, 0.0))[:, 0]
-        usable = finite & (smallest > 0.0)
-        grown[~usable] = np.nan
-        ignored += int((~usable).sum())
-        values[lo:hi] = grown
+        usable = np.asarray(finite & (smallest > 0.0), dtype=bool)
+        ignored += hi - lo - int(usable.sum())
+        values[lo:hi] = np.where(usable[:, None, None], grown, np.nan)
     kind = INCREMENT_COVARIANCE if ignored < n else NO_NOISE
     return RowNoise(kind, values, ignored)

@@ -96,12 +96,6 @@ def row_noise(kind, noise, share, w, v, p, q, p2, q2, total):  # type: ignore[no
 
 
 @numba.njit(cache=True)
-def start_place(edges, t):  # type: ignore[no-untyped-def]
-    """Interval that holds time ``t``: -1 before the first edge, len(edges) - 1 after the last."""
-    return np.searchsorted(edges, t, side="right") - 1
-
-
-@numba.njit(cache=True)
 def walk(  # type: ignore[no-untyped-def]
     edges, tangents, stamps, restart, speed2, hole, per_piece, kind, noise
 ):
@@ -128,73 +122,79 @@ def walk(  # type: ignore[no-untyped-def]
         restart
     """
     n, channels, last = len(stamps), len(per_piece), len(edges) - 1
-    pose, extra = np.zeros((n, 7)), np.zeros((n, 4))
+    pose, extra, slope = np.zeros((n, 7)), np.zeros((n, 4)), np.zeros((n, 6))
     moments = np.zeros((n, channels, 11))
-    stated = np.zeros((n if kind else 0, 6, 6))
-    mom, total = np.zeros((channels, 11)), np.zeros((6, 6))
-    slope, by_turn = np.zeros((n, 6)), np.zeros(6)
-    p, q = (0.0, 0.0, 0.0), (0.0, 0.0, 0.0, 1.0)
-    path = turn = longest = current = flagged = 0.0
-    amounts = np.zeros(5)
+    stated = np.zeros((n, 6, 6) if kind else (0, 6, 6))
+    # what is settled up to ``now``, an edge or a restart; reports in between settle nothing, so
+    # that one stamp's answer does not depend on which others were asked
+    place, mom, total = np.zeros(7), np.zeros((channels, 11)), np.zeros((6, 6))
+    tally, by_turn, amounts = np.zeros(4), np.zeros(6), np.zeros(5)
+    place[6] = 1.0
     now = stamps[0] if n else 0.0
-    e = start_place(edges, now)
+    e = np.searchsorted(edges, now, side="right") - 1
     for i in range(n):
-        while now < stamps[i]:
-            p2, q2 = p, q
-            if e < 0 or e >= last:
-                # nothing is known outside the span: the body is held, its uncertainty grows
-                end = stamps[i] if e >= last else min(stamps[i], edges[0])
-                h = end - now
-                a, b = (now - edges[last], end - edges[last])
-                if e < 0:
-                    a, b = edges[0] - end, edges[0] - now
-                wide = b * b - a * a
-                amounts[0] = amounts[1] = 0.0
-                flagged = 1.0
-            else:
-                end = min(stamps[i], edges[e + 1])
-                length = edges[e + 1] - edges[e]
-                h = end - now
-                share = h / length if length > 0.0 else 1.0
-                w, v = split_tangent(tangents[e], share)
-                dp, dq = exponential(w, v)
-                d = rotate(q, dp)
-                p2 = (p[0] + d[0], p[1] + d[1], p[2] + d[2])
-                q2 = multiply(q, dq)
-                add_slope(q, w, v, d, by_turn)
-                wide = hole[e] * h
-                if hole[e] > 0.0:
-                    flagged = 1.0
-                amounts[0] = np.sqrt(v[0] * v[0] + v[1] * v[1] + v[2] * v[2])
-                amounts[1] = np.sqrt(w[0] * w[0] + w[1] * w[1] + w[2] * w[2])
-                if kind:
-                    row_noise(kind, noise[e], share, w, v, p, q, p2, q2, total)
-            amounts[2], amounts[3], amounts[4] = h, speed2[0] * wide, speed2[1] * wide
-            path += amounts[0]
-            turn += amounts[1]
-            current += h
-            longest = max(longest, current)
-            add_moments(per_piece, amounts, p, p2, mom)
-            p, q, now = p2, q2, end
-            if e < 0:
-                if now >= edges[0]:
-                    e, current = 0, 0.0
-            elif e < last and now >= edges[e + 1]:
-                e += 1
-                current = 0.0
-        pose[i, 0], pose[i, 1], pose[i, 2] = p
-        pose[i, 3], pose[i, 4], pose[i, 5], pose[i, 6] = q
-        moments[i], slope[i] = mom, by_turn
-        extra[i, 0], extra[i, 1], extra[i, 2], extra[i, 3] = path, turn, longest, flagged
+        while e < last and edges[e + 1] <= stamps[i]:
+            piece(
+                e, now, edges[e + 1], edges, tangents, speed2, hole, amounts, place, tally, by_turn,
+                per_piece, mom, kind, noise, total,
+            )  # fmt: skip
+            e += 1
+            now = edges[e]
+        pose[i], extra[i], slope[i], moments[i] = place, tally, by_turn, mom
+        here = stated[i] if kind else total
         if kind:
-            stated[i] = total
+            here[:] = total
+        if stamps[i] > now:
+            piece(
+                e, now, stamps[i], edges, tangents, speed2, hole, amounts, pose[i], extra[i],
+                slope[i], per_piece, moments[i], kind, noise, here,
+            )  # fmt: skip
         if restart[i]:
-            p, q = (0.0, 0.0, 0.0), (0.0, 0.0, 0.0, 1.0)
-            path = turn = longest = current = flagged = 0.0
-            mom[:] = 0.0
-            total[:] = 0.0
-            by_turn[:] = 0.0
+            now = stamps[i]
+            place[:], mom[:], total[:], tally[:], by_turn[:] = 0.0, 0.0, 0.0, 0.0, 0.0
+            place[6] = 1.0
     return pose, moments, stated, extra, slope
+
+
+@numba.njit(cache=True)
+def piece(  # type: ignore[no-untyped-def]
+    e, begin, end, edges, tangents, speed2, hole, amounts, place, tally, by_turn,
+    per_piece, mom, kind, noise, total,
+):  # fmt: skip
+    """Carry all sums from time ``begin`` to ``end`` within interval ``e`` (-1, M: outside)."""
+    last, h = len(edges) - 1, end - begin
+    p, q = (place[0], place[1], place[2]), (place[3], place[4], place[5], place[6])
+    p2 = p
+    if e < 0 or e >= last:
+        # nothing is known outside the span: the body is held, its uncertainty grows
+        a, b = (begin - edges[last], end - edges[last]) if e >= last else (
+            edges[0] - end, edges[0] - begin
+        )  # fmt: skip
+        wide = b * b - a * a
+        amounts[0], amounts[1] = 0.0, 0.0
+        tally[GAP] = 1.0
+    else:
+        length = edges[e + 1] - edges[e]
+        share = h / length if length > 0.0 else 1.0
+        w, v = split_tangent(tangents[e], share)
+        dp, dq = exponential(w, v)
+        d = rotate(q, dp)
+        p2, q2 = (p[0] + d[0], p[1] + d[1], p[2] + d[2]), multiply(q, dq)
+        add_slope(q, w, v, d, by_turn)
+        wide = hole[e] * h
+        if hole[e] > 0.0:
+            tally[GAP] = 1.0
+        amounts[0] = np.sqrt(v[0] * v[0] + v[1] * v[1] + v[2] * v[2])
+        amounts[1] = np.sqrt(w[0] * w[0] + w[1] * w[1] + w[2] * w[2])
+        if kind:
+            row_noise(kind, noise[e], share, w, v, p, q, p2, q2, total)
+        place[0], place[1], place[2] = p2
+        place[3], place[4], place[5], place[6] = q2
+    amounts[2], amounts[3], amounts[4] = h, speed2[0] * wide, speed2[1] * wide
+    tally[PATH] += amounts[0]
+    tally[TURN] += amounts[1]
+    tally[LONGEST] = max(tally[LONGEST], h)
+    add_moments(per_piece, amounts, p, p2, mom)
 
 
 @numba.njit(cache=True)
