@@ -1,0 +1,166 @@
+"""How good a robot's odometry is, judged by landmarks that neighbouring chunks share.
+
+Where two neighbouring chunks see two or more common landmarks, these give the motion between the
+anchors without odometry. The ratio of the two motions is the scale of the odometry; what is left,
+against what the noise model predicts, says by how much that model understates the drift.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from jointmap import frames
+from jointmap.graph.start.align import Form, align, minimal_points
+from jointmap.graph.start.chunks import Chunks
+from jointmap.graph.start.condense import Condensed
+from jointmap.graph.start.gather import Steps
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+#: Motions that a verdict needs, and the least rotation and path of one that counts.
+_LEAST_MOTIONS = 8
+_LEAST_TURN = 0.15
+_LEAST_PATH = 0.15
+#: Median of chi-square with one degree of freedom.
+_MEDIAN = 0.4549
+#: Scales beyond this are a broken log, not a scale.
+_SCALE_LIMITS = (0.5, 2.0)
+
+
+@dataclass(frozen=True)
+class OdometryCheck:
+    """Per robot: scale of translation and rotation (motion / odometry), variance factors."""
+
+    translation: Floats
+    rotation: Floats
+    turn_factor: Floats
+    shift_factor: Floats
+
+    @property
+    def worth_repeating(self) -> bool:
+        """Whether the corrected odometry is so different that the chunks should be cut anew."""
+        scaled = np.abs(np.stack([self.translation, self.rotation]) - 1.0).max(initial=0.0)
+        factor = np.stack([self.turn_factor, self.shift_factor]).max(initial=1.0)
+        return bool(scaled > 0.015 or factor > 2.0)
+
+
+@dataclass(frozen=True)
+class _Motion:
+    """One motion between neighbouring anchors by landmarks and by odometry."""
+
+    robot: int
+    turn: float
+    odometry_turn: float
+    turn_variance: float
+    path: float
+    odometry_path: float
+    shift_variance: float
+
+
+def check_odometry(
+    condensed: Condensed, chunks: Chunks, steps: Steps, robots: int, form: Form
+) -> OdometryCheck:
+    """Compare odometry with landmarks robot by robot; 1 where there is too little to tell."""
+    motions = _motions(condensed, chunks, form)
+    values = np.ones((4, robots))
+    for r in range(robots):
+        values[:, r] = _judge([m for m in motions if m.robot == r])
+    return OdometryCheck(*values)
+
+
+def _motions(condensed: Condensed, chunks: Chunks, form: Form) -> list[_Motion]:
+    seen = condensed.seen
+    order = np.argsort(seen.pose, kind="stable")
+    bounds = np.searchsorted(seen.pose[order], np.arange(chunks.n + 1))
+    result = []
+    for c in range(1, chunks.n):
+        if not np.isfinite(chunks.joint_turn[c]):
+            continue
+        a, b = order[bounds[c - 1] : bounds[c]], order[bounds[c] : bounds[c + 1]]
+        _, i, j = np.intersect1d(seen.point[a], seen.point[b], return_indices=True)
+        if len(i) < minimal_points(form):
+            continue
+        a, b = a[i], b[j]
+        variance = np.trace(seen.covariance[a] + seen.covariance[b], axis1=1, axis2=2)
+        variance = variance / seen.at.shape[1]
+        fit = align(seen.at[b], seen.at[a], 1.0 / variance, form)
+        if bool(fit.degenerate):
+            continue
+        result.append(_motion(chunks, c, fit.rotation, fit.translation, fit.covariance))
+    return result
+
+
+def _motion(
+    chunks: Chunks, c: int, rotation: Floats, translation: Floats, covariance: Floats
+) -> _Motion:
+    lie = frames.group(len(translation))
+    tangent = lie.log(lie.build(rotation, translation))
+    odometry = lie.log(chunks.joint[c])
+    flat = lie.dim == 2
+    axis = 2
+    linear, other = (tangent[:2], odometry[:2]) if flat else (tangent[3:], odometry[3:])
+    own = covariance[2, 2]
+    shift = np.trace(covariance[:2, :2] if flat else covariance[3:, 3:]) / lie.dim
+    return _Motion(
+        int(chunks.robot[c]),
+        float(tangent[axis]),
+        float(odometry[axis]),
+        float(own + chunks.joint_turn[c]),
+        float(np.linalg.norm(linear)),
+        float(np.linalg.norm(other)),
+        float(shift + chunks.joint_shift[c]),
+    )
+
+
+def _judge(motions: list[_Motion]) -> tuple[float, float, float, float]:
+    if len(motions) < _LEAST_MOTIONS:
+        return 1.0, 1.0, 1.0, 1.0
+    turn, odometry_turn, turn_variance, path, odometry_path, shift_variance = (
+        np.array([getattr(m, name) for m in motions])
+        for name in (
+            "turn", "odometry_turn", "turn_variance", "path", "odometry_path", "shift_variance"
+        )
+    )  # fmt: skip
+    rotation = _scale(turn, odometry_turn, _LEAST_TURN)
+    translation = _scale(path, odometry_path, _LEAST_PATH)
+    turn_rest = (turn - rotation * odometry_turn + np.pi) % (2.0 * np.pi) - np.pi
+    turn_factor = np.median(turn_rest**2 / turn_variance) / _MEDIAN
+    shift_factor = np.median((path - translation * odometry_path) ** 2 / shift_variance) / _MEDIAN
+    return translation, rotation, max(float(turn_factor), 1.0), max(float(shift_factor), 1.0)
+
+
+def _scale(measured: Floats, odometry: Floats, least: float) -> float:
+    """Weighted median of the ratios; 1 unless it is known and differs clearly from 1."""
+    good = np.abs(odometry) > least
+    if np.count_nonzero(good) < _LEAST_MOTIONS:
+        return 1.0
+    ratio, weight = measured[good] / odometry[good], np.abs(odometry[good])
+    order = np.argsort(ratio)
+    total = np.cumsum(weight[order])
+    scale = float(ratio[order][np.searchsorted(total, 0.5 * total[-1])])
+    spread = 1.4826 * float(np.median(np.abs(ratio - scale)))
+    sure = abs(scale - 1.0) > 2.0 * 1.2533 * spread / np.sqrt(np.count_nonzero(good))
+    inside = _SCALE_LIMITS[0] < scale < _SCALE_LIMITS[1]
+    return scale if sure and inside else 1.0
+
+
+def corrected(steps: Steps, robot: Ints, check: OdometryCheck, dimension: int) -> Steps:
+    """Apply scales and variance factors to increments (K, ...) of robots (K,)."""
+    lie = frames.group(dimension)
+    tangent = lie.log(steps.delta)
+    linear = slice(0, 2) if dimension == 2 else slice(3, 6)
+    angular = slice(2, 3) if dimension == 2 else slice(0, 3)
+    tangent[:, linear] *= check.translation[robot][:, None]
+    tangent[:, angular] *= check.rotation[robot][:, None]
+    return Steps(
+        lie.exp(tangent),
+        steps.turn_variance * check.turn_factor[robot],
+        steps.shift_variance * check.shift_factor[robot],
+        steps.length * check.translation[robot],
+        steps.turned * check.rotation[robot],
+    )
