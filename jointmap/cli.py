@@ -13,6 +13,7 @@ import signal
 import sys
 import traceback
 from collections.abc import Callable, Sequence
+from dataclasses import asdict
 from pathlib import Path
 from types import FrameType
 from typing import TYPE_CHECKING, NoReturn
@@ -82,9 +83,8 @@ def _refuse(error: JointMapError, *, as_json: bool) -> None:
     """Say what was refused: every problem of the logs, or the message."""
     problems = error.problems if isinstance(error, LogFormatError) else ()
     if as_json:
-        from jointmap.products.check_page import refusal_summary
-
-        print(json.dumps(refusal_summary(problems, str(error)), indent=2, ensure_ascii=False))
+        told = {"ok": False, "message": str(error), "problems": [asdict(p) for p in problems]}
+        print(json.dumps(told, indent=2, ensure_ascii=False))
     refused = [p for p in problems if not p.mended]
     for problem in problems:
         print(problem, file=sys.stderr)
@@ -177,14 +177,15 @@ def _fill_check(parser: argparse.ArgumentParser) -> None:
 def _check(args: argparse.Namespace) -> int:
     from jointmap.atomic import recover
     from jointmap.ingest import read_survey
-    from jointmap.products.check_page import check_page, check_summary
+    from jointmap.ingest.summary import summarise, summary_dict, summary_lines
+    from jointmap.products.files import json_text
 
     _tell(recover(args.survey))
-    survey = read_survey(args.survey)
+    summary = summarise(read_survey(args.survey))
     if args.json:
-        print(json.dumps(check_summary(survey), indent=2, ensure_ascii=False))
+        print(json_text({"ok": True, **summary_dict(summary)}))
     else:
-        print(check_page(survey, _width()), end="")
+        print("\n".join(summary_lines(summary)))
     return OK
 
 

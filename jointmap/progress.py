@@ -116,7 +116,7 @@ class Terminal(Silent):
         return f"{name}  {n if n else ''} {text}"
 
     def _write(self, line: str) -> None:
-        line = line.rstrip()[:_columns(self._stream)]
+        line = line.rstrip()[: _columns(self._stream)]
         self._stream.write("\r" + line.ljust(self._width))
         self._stream.flush()
         self._width = len(line)
@@ -125,9 +125,11 @@ class Terminal(Silent):
 def _columns(stream: TextIO) -> int:
     """Characters that fit on one line; one less than the width so that no terminal wraps."""
     try:
-        return max(os.get_terminal_size(stream.fileno()).columns - 1, 20)
+        columns = os.get_terminal_size(stream.fileno()).columns
     except (OSError, ValueError):
-        return 79
+        columns = 0
+    # Some terminals (serial lines, containers) do not know their width and say 0.
+    return max(columns - 1, 20) if columns else 79
 
 
 def choose(quiet: bool = False, stream: TextIO | None = None) -> Silent:

@@ -13,7 +13,7 @@ from typing import Any, Literal
 
 from jointmap.errors import SettingsError
 
-Kernel = Literal["none", "huber", "cauchy", "welsch", "tukey", "dcs", "geman-mcclure", "gnc"]
+Kernel = Literal["none", "huber", "cauchy", "welsch", "tukey", "dcs", "geman-mcclure", "truncated"]
 DatumKind = Literal["landmarks", "robot", "control"]
 NoiseMode = Literal["given", "estimated"]
 
@@ -26,7 +26,7 @@ KERNELS: tuple[str, ...] = (
     "tukey",
     "dcs",
     "geman-mcclure",
-    "gnc",
+    "truncated",
 )
 DATUMS: tuple[str, ...] = ("landmarks", "robot", "control")
 NOISE_MODES: tuple[str, ...] = ("given", "estimated")

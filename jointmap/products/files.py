@@ -174,7 +174,7 @@ def _trajectory_files(folder: Path) -> list[Path]:
 
 def _robot_order(meta: Mapping[str, Any], found: Mapping[str, Trajectory]) -> list[str]:
     """Robots in the order of the survey where reference.json tells it, then by name."""
-    told = [robot for part in meta["components"] or [] for robot in part.get("robots", [])]
+    told = [robot for part in meta["components"] or [] for robot in part]
     listed = [robot for robot in dict.fromkeys(told) if robot in found]
     return [*listed, *(robot for robot in found if robot not in listed)]
 

@@ -131,26 +131,13 @@ def _ties(reference: Reference, width: int) -> list[str]:
 def _frames(reference: Reference, width: int) -> list[str]:
     """Which robots share a frame, and where its coordinates start."""
     lines: list[str] = []
-    datums = reference.meta["datum"]
-    listed = datums if isinstance(datums, list) else [datums]
-    for i, part in enumerate(reference.meta["components"] or []):
-        robots = ", ".join(part.get("robots", []))
-        lines += wrap(f"Frame {part.get('component', i)}: {robots}.", width)
-        if i < len(listed) and isinstance(listed[i], Mapping):
-            lines += wrap(_datum_words(listed[i]), width, "  ")
+    datum: Mapping[str, Any] = reference.meta["datum"] or {}
+    words = list(datum.get("components") or [])
+    for i, robots in enumerate(reference.meta["components"] or []):
+        lines += wrap(f"Frame {i}: {', '.join(robots)}.", width)
+        if i < len(words):
+            lines += wrap(f"Datum: {words[i]}.", width, "  ")
     return lines
-
-
-def _datum_words(datum: Mapping[str, Any]) -> str:
-    robot = datum.get("robot")
-    start = f"Coordinates start at {robot}'s first pose" if robot else "Coordinates as surveyed"
-    words = {
-        "landmarks": f"{start}; sigmas are relative to the landmarks as a whole.",
-        "keyframes": f"{start}; sigmas are relative to the paths as a whole (too few landmarks).",
-        "robot": f"{start}, which is taken as exact; sigmas grow away from it.",
-        "control": "Coordinates and sigmas are those of the control points and fixes.",
-    }
-    return str(words.get(str(datum.get("kind")), f"Datum: {datum.get('kind')}."))
 
 
 def pair_ties(reference: Reference) -> pd.DataFrame:

@@ -68,7 +68,7 @@ def read_stamps(path: Path | str, robots: tuple[str, ...]) -> Stamps:
     path = path.resolve()
     problems = Problems()
     # Reuse of the survey's reader: the folder of the file stands for the survey's.
-    table = read_table(SurveyFiles(path.parent, problems), path.name, _QUESTIONS, 2, "", "--at")
+    table = read_table(SurveyFiles(path.parent, problems), path.name, _QUESTIONS, "", "--at")
     if table is not None:
         _check(table, path.name, robots, problems)
     problems.raise_refused()
