@@ -21,7 +21,6 @@ def check_survey(survey: Survey, problems: Problems) -> None:
         message = "the survey has one robot"
         mend = "this is fine; nothing joins robots"
         problems.add(FILE, message, mend, column="robots", mended=True)
-    _check_datum(survey, problems)
     for log in survey.robots.values():
         _check_spans(log, problems)
     _check_closure_spans(survey, problems)
@@ -29,18 +28,6 @@ def check_survey(survey: Survey, problems: Problems) -> None:
     _check_control(survey, seen, problems)
     _check_determined(survey, seen, problems)
     _check_edits(survey, problems)
-
-
-def _check_datum(survey: Survey, problems: Problems) -> None:
-    """The control datum needs something that is known in the site frame."""
-    if survey.datum_kind != "control":
-        return
-    fixes = any(r.fixes is not None and len(r.fixes.t_s) for r in survey.robots.values())
-    control = survey.control_points is not None and len(survey.control_points.landmarks)
-    if not fixes and not control:
-        message = "there are neither control points nor fixes"
-        mend = 'give some, or choose kind = "landmarks"'
-        problems.add(FILE, message, mend, column="datum.kind")
 
 
 def _outside(t: Floats, log: RobotLog) -> NDArray[np.bool_]:
@@ -104,9 +91,7 @@ def _position_scalars(sightings: Observations) -> Floats:
     return np.asarray((~np.isnan(sightings.value[:, :6])).sum(axis=1), dtype=np.float64)
 
 
-def _check_control(
-    survey: Survey, seen: Mapping[str, tuple[int, int]], problems: Problems
-) -> None:
+def _check_control(survey: Survey, seen: Mapping[str, tuple[int, int]], problems: Problems) -> None:
     control = survey.control_points
     if control is None:
         return
@@ -158,18 +143,13 @@ def _first_sightings(survey: Survey, names: list[str]) -> dict[str, tuple[str, i
 
 
 def _check_edits(survey: Survey, problems: Problems) -> None:
-    """Edits that change nothing, and edits that contradict each other."""
-    actions: dict[tuple[str, str], str] = {}
+    """Edits that change nothing."""
     for edit in survey.edits.associations:
         log = survey.robots.get(edit.robot)
         labels = log.sightings.targets if log is not None and log.sightings is not None else ()
         if edit.label not in labels:
             message = f"{edit.robot} never sighted {edit.label!r}"
             problems.add(_EDITS, message, "the edit changes nothing", column="label", mended=True)
-        key, state = (edit.robot, edit.label), f"{edit.action} {edit.landmark or ''}".strip()
-        if edit.action == "force" and actions.setdefault(key, state) != state:
-            message = f"{edit.label!r} of {edit.robot} has edits that contradict each other"
-            problems.add(_EDITS, message, "keep one of them", column="label")
     for split in survey.edits.splits:
         log = survey.robots.get(split.robot)
         if log is not None and _outside(np.array([split.t_s]), log)[0]:

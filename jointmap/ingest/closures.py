@@ -9,7 +9,7 @@ import numpy as np
 from jointmap import schema
 from jointmap.ingest.covariance import read_covariance
 from jointmap.ingest.problems import Problems
-from jointmap.ingest.stamps import copies, sort_by_time
+from jointmap.ingest.stamps import drop_copies, sort_by_time
 from jointmap.ingest.survey import Closures, Floats
 from jointmap.ingest.table import Table
 from jointmap.ingest.values import (
@@ -39,7 +39,8 @@ def read_closures(
     require_numbers(table, ["t_b_s", *pose_names], problems)
     require_names(table, "robot_a", problems)
     require_names(table, "robot_b", problems)
-    table = _drop_copies(table, problems)
+    contents = [*(table.texts[c].code for c in ("robot_a", "robot_b")), *table.numbers.values()]
+    table = table.take(drop_copies(table, contents, table.number("t_a_s"), problems))
     pose = table.matrix(pose_names)
     if dimension == 2:
         check_angle(table, "yaw_rad", problems)
@@ -63,35 +64,24 @@ def read_closures(
     )
 
 
-def _drop_copies(table: Table, problems: Problems) -> Table:
-    robots = [table.texts[c].code for c in ("robot_a", "robot_b")]
-    content = np.column_stack([*robots, table.matrix(tuple(table.numbers))])
-    extra = copies(table.number("t_a_s"), content)
-    if extra.size == 0:
-        return table
-    message, mend = "repeats another row entirely", "the first one is kept"
-    table.complain(problems, extra, None, message, mend, mended=True)
-    keep = np.ones(table.n, dtype=bool)
-    keep[extra] = False
-    return table.take(keep)
-
-
 def _covariances(table: Table, dimension: int, problems: Problems) -> Floats:
     """Full covariance, else the squared sigmas where all are given, else NaN."""
     sigmas = schema.sigma_columns(dimension)
     check_sigmas(table, sigmas, problems)
     sigma = table.matrix(sigmas)
-    part = np.isnan(sigma).any(axis=1) & ~np.isnan(sigma).all(axis=1)
+    given = ~np.isnan(sigma)
+    part = np.asarray(given.any(axis=1) & ~given.all(axis=1))
     message = "sigmas of some components only"
     table.complain(problems, part, sigmas[0], message, "give all of them or none")
     diagonal = np.zeros((table.n, len(sigmas), len(sigmas)))
     np.einsum("nii->ni", diagonal)[:] = sigma**2
-    diagonal[np.isnan(sigma).any(axis=1)] = np.nan
+    diagonal[~given.all(axis=1)] = np.nan
     full = read_covariance(table, dimension, problems)
     if full is None:
         return diagonal
-    whole = ~np.isnan(full).any(axis=(1, 2))
-    part = ~np.isnan(full).all(axis=(1, 2)) & ~whole
+    there = ~np.isnan(full)
+    whole = np.asarray(there.all(axis=(1, 2)))
+    part = np.asarray(there.any(axis=(1, 2)) & ~whole)
     table.complain(
         problems, part, "cov_x_x", "the covariance is incomplete", "give all of it or nothing"
     )

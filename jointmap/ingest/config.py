@@ -98,7 +98,7 @@ def read_config(files: SurveyFiles) -> Config | None:
 def _dimension(survey: Section) -> int | None:
     value = survey.values.get("dimension") if survey.has("dimension") else None
     if value in (2, 3) and not isinstance(value, bool | float):
-        return int(value)  # type: ignore[arg-type]
+        return int(value)
     message = "is missing" if value is None else f"{value!r} is neither 2 nor 3"
     survey.wrong("dimension", message, "write dimension = 2 or dimension = 3 under [survey]")
     return None
@@ -152,7 +152,10 @@ def _robots(section: Section, dimension: int) -> dict[str, RobotConfig]:
         robots[name] = _robot(name, section.section(name), dimension)
     if not robots:
         section.problems.add(
-            FILE, "the survey has no robot", "add a section [robots.NAME] per robot", column="robots"
+            FILE,
+            "the survey has no robot",
+            "add a section [robots.NAME] per robot",
+            column="robots",
         )
     return robots
 
@@ -238,9 +241,7 @@ def _sensor_noise(section: Section, dimension: int) -> dict[str, float]:
     given = {}
     for term in SENSOR_NOISE:
         exact = term == "range_per_m"
-        value = section.number(
-            f"sigma_{term}", least=0.0, **({} if exact else {"above": 0.0})
-        )
+        value = section.number(f"sigma_{term}", least=0.0, **({} if exact else {"above": 0.0}))
         if value is not None:
             given[term] = value
     if dimension == 2:
@@ -249,5 +250,7 @@ def _sensor_noise(section: Section, dimension: int) -> dict[str, float]:
             given["rz_rad"] = yaw
     for term, value in given.items():
         if term.endswith("_rad") and value > np.pi:
-            section.wrong(f"sigma_{term}", f"{value:g} rad is over half a turn", "multiply by pi/180")
+            section.wrong(
+                f"sigma_{term}", f"{value:g} rad is over half a turn", "multiply by pi/180"
+            )
     return given

@@ -45,9 +45,7 @@ def read_control(table: Table, dimension: int, problems: Problems) -> ControlPoi
     return ControlPoints(tuple(kept.texts["landmark"].text()), position, sigma, kept.provenance)
 
 
-def _compare(
-    table: Table, code: Ints, position: Floats, sigma: Floats, problems: Problems
-) -> None:
+def _compare(table: Table, code: Ints, position: Floats, sigma: Floats, problems: Problems) -> None:
     """Repeated points that agree are averaged; those that do not are refused."""
     repeats = np.zeros(len(code), dtype=bool)
     repeats[1:] = code[1:] == code[:-1]

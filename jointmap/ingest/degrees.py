@@ -1,4 +1,4 @@
-"""Does odometry speak degrees where radians are asked for?
+"""Finding odometry in degrees where radians are asked for.
 
 A yaw may be unwrapped and grow for ever, so its size alone tells nothing.
 """

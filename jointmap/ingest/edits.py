@@ -90,9 +90,7 @@ def toml_value(value: str | float) -> str:
     return repr(float(value))
 
 
-def read_edits(
-    files: SurveyFiles, sensors: Mapping[str, Sequence[str]]
-) -> Edits:
+def read_edits(files: SurveyFiles, sensors: Mapping[str, Sequence[str]]) -> Edits:
     """edits.toml of the survey, checked; ``sensors`` are the sensors' names by robot."""
     values = load_toml(files, FILE)
     if values is None:
@@ -115,6 +113,29 @@ def read_edits(
             if edit is not None:
                 found.append(edit)
     root.done()
+    edits = _sorted(found)
+    _refuse_contradictions(edits.associations, files.problems)
+    return edits
+
+
+def _refuse_contradictions(edits: Sequence[AssociationEdit], problems: Problems) -> None:
+    """One label cannot be forced to two landmarks, nor be forced to what it is rejected from.
+
+    An edit that rejects without a landmark beside one that forces is fine: it says what the label
+    is not, the other what it is.
+    """
+    forced: dict[tuple[str, str], str | None] = {}
+    for edit in (e for e in edits if e.action == "force"):
+        if forced.setdefault((edit.robot, edit.label), edit.landmark) != edit.landmark:
+            message = f"{edit.label!r} of {edit.robot} is forced to two landmarks"
+            problems.add(FILE, message, "keep one of them", column="force_association")
+    for edit in (e for e in edits if e.action == "reject" and e.landmark is not None):
+        if forced.get((edit.robot, edit.label)) == edit.landmark:
+            message = f"{edit.label!r} of {edit.robot} is forced and rejected"
+            problems.add(FILE, message, "keep one of them", column="reject_association")
+
+
+def _sorted(found: Sequence[Edit]) -> Edits:
     return Edits(
         associations=tuple(e for e in found if isinstance(e, AssociationEdit)),
         masks=tuple(e for e in found if isinstance(e, MaskEdit)),

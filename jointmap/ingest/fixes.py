@@ -12,7 +12,7 @@ from jointmap import schema
 from jointmap.ingest.config import FILE, Config
 from jointmap.ingest.geodesy import WGS84, Ellipsoid, ellipsoid_of, to_site
 from jointmap.ingest.problems import Problems
-from jointmap.ingest.stamps import copies, sort_by_time
+from jointmap.ingest.stamps import drop_copies, sort_by_time
 from jointmap.ingest.survey import Fixes, Floats
 from jointmap.ingest.table import Table
 from jointmap.ingest.values import check_sigmas, refuse_dimension, require, require_numbers
@@ -53,7 +53,8 @@ def read_fixes(table: Table, dimension: int, problems: Problems) -> RawFixes | N
     sigmas = ["sigma_x_m", "sigma_y_m", "sigma_z_m"][:dimension]
     check_sigmas(table, sigmas, problems)
     columns = local if form == "local" else geographic
-    table = _drop_copies(table, [*columns, *sigmas], problems)
+    contents = [table.number(c) for c in (*columns, *sigmas)]
+    table = table.take(drop_copies(table, contents, table.number("t_s"), problems))
     position = table.matrix(columns)
     if form == "geographic" and dimension == 2:
         np.nan_to_num(position[:, 2], copy=False, nan=0.0)
@@ -94,17 +95,6 @@ def _check_geographic(table: Table, dimension: int, problems: Problems) -> None:
         problems.add(table.files[0], message, mend, column="height_m", mended=True)
 
 
-def _drop_copies(table: Table, columns: list[str], problems: Problems) -> Table:
-    extra = copies(table.number("t_s"), table.matrix(columns))
-    if extra.size == 0:
-        return table
-    message, mend = "repeats another row entirely", "the first one is kept"
-    table.complain(problems, extra, None, message, mend, mended=True)
-    keep = np.ones(table.n, dtype=bool)
-    keep[extra] = False
-    return table.take(keep)
-
-
 def place_fixes(
     raw: Mapping[str, RawFixes], config: Config, has_control: bool, problems: Problems
 ) -> tuple[dict[str, Fixes], Origin | None]:
@@ -130,7 +120,7 @@ def place_fixes(
     for name, fixes in raw.items():
         position = fixes.position
         if fixes.form == "geographic":
-            position = np.column_stack(to_site(*position.T, origin, ellipsoid))
+            position = to_site(position, origin, ellipsoid)
         placed[name] = _fixes(fixes, position, config.dimension)
     return placed, origin
 

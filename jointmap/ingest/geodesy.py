@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+import numpy as np
 import pyproj
 from pyproj.exceptions import CRSError
 
@@ -46,18 +47,27 @@ def ellipsoid_of(crs: str) -> Ellipsoid:
     return Ellipsoid(float(shape.semi_major_metre), float(shape.semi_minor_metre))
 
 
-def to_site(
-    lat_deg: Floats,
-    lon_deg: Floats,
-    height_m: Floats,
-    origin: tuple[float, float, float],
-    ellipsoid: Ellipsoid,
-) -> tuple[Floats, Floats, Floats]:
-    """East, north and up (m) of geodetic positions, about ``origin`` (lat_deg, lon_deg, height_m).
+def to_site(geodetic: Floats, origin: tuple[float, float, float], ellipsoid: Ellipsoid) -> Floats:
+    """East, north and up of geodetic positions.
+
+    Parameters
+    ----------
+    geodetic : (n, 3) float
+        Latitude and longitude (degrees), ellipsoidal height (m).
+    origin : tuple of float
+        The same of the site frame's origin.
+    ellipsoid : Ellipsoid
+        Of both.
+
+    Returns
+    -------
+    (n, 3) float
+        East, north, up (m) in the topocentric frame of the origin.
 
     References
     ----------
-    IOGP Guidance Note 7-2, methods 9602 and 9837 (geographic to topocentric in one).
+    IOGP Guidance Note 7-2, methods 9602 (geographic to geocentric) and 9836 (geocentric to
+    topocentric).
     """
     shape = f"+a={ellipsoid.a!r} +b={ellipsoid.b!r}"
     lat, lon, height = origin
@@ -66,5 +76,5 @@ def to_site(
         f"+step +proj=cart {shape} "
         f"+step +proj=topocentric {shape} +lat_0={lat!r} +lon_0={lon!r} +h_0={height!r}"
     )
-    east, north, up = step.transform(lon_deg, lat_deg, height_m)
-    return east, north, up
+    east, north, up = step.transform(geodetic[:, 1], geodetic[:, 0], geodetic[:, 2])
+    return np.column_stack([east, north, up])

@@ -187,7 +187,9 @@ def _read_barcodes(path: Path, problems: Problems) -> dict[int, int]:
     subjects: dict[int, int] = {}
     for subject, barcode in table.tolist():
         if subject != subject // 1 or barcode != barcode // 1:
-            problems.add(path.name, f"{subject:g} {barcode:g} are no whole numbers", "mend the line")
+            problems.add(
+                path.name, f"{subject:g} {barcode:g} are no whole numbers", "mend the line"
+            )
         elif int(barcode) in subjects:
             problems.add(path.name, f"barcode {int(barcode)} stands twice", "keep one of the lines")
         else:

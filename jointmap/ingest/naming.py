@@ -36,9 +36,7 @@ def landmarks_of(
     order = np.argsort(sightings.target, kind="stable")
     bounds = np.searchsorted(sightings.target[order], np.arange(len(sightings.targets) + 1))
     where = {label: i for i, label in enumerate(sightings.targets)}
-    for i, (owner, label) in enumerate(
-        zip(associations.robots, associations.labels, strict=True)
-    ):
+    for i, (owner, label) in enumerate(zip(associations.robots, associations.labels, strict=True)):
         k = where.get(label)
         if owner != robot or k is None:
             continue

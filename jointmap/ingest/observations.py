@@ -2,15 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
 import numpy as np
 from numpy.typing import NDArray
 
 from jointmap import schema
+from jointmap.ingest.config import Config
 from jointmap.ingest.covariance import read_covariance
 from jointmap.ingest.problems import Problems
-from jointmap.ingest.stamps import copies, sort_by_time
+from jointmap.ingest.stamps import drop_copies, sort_by_time
 from jointmap.ingest.survey import SIGMA_COLUMNS, VALUE_COLUMNS, Floats, Observations
 from jointmap.ingest.table import Table
 from jointmap.ingest.values import (
@@ -38,16 +37,12 @@ _AXIS_SIGMA = {
 def read_observations(
     table: Table,
     kind: str,
-    dimension: int,
-    sensors: Sequence[str],
-    robots: Sequence[str],
     me: str,
+    config: Config,
     problems: Problems,
 ) -> Observations | None:
-    """Sightings or encounters (``kind``) of robot ``me`` from its concatenated files.
-
-    ``sensors`` are those of the robot, ``robots`` all of the survey.
-    """
+    """Sightings or encounters (``kind``) of robot ``me`` from its concatenated files."""
+    dimension = config.dimension
     spec = schema.input_table(kind)
     target_column = "landmark" if kind == "sightings" else "robot"
     refuse_dimension(table, spec, dimension, problems)
@@ -57,15 +52,18 @@ def read_observations(
         return None
     table = sort_by_time(table, problems)
     table = _drop_blind(table, dimension, problems)
-    sensor, target, targets = _names(table, target_column, sensors, robots, me, problems)
-    table, sensor, target = _drop_copies(table, sensor, target, problems)
+    sensor, target, targets = _names(table, target_column, me, config, problems)
+    contents = [sensor, target, *table.numbers.values()]
+    keep = drop_copies(table, contents, table.number("t_s"), problems)
+    if not keep.all():
+        table, sensor, target = table.take(keep), sensor[keep], target[keep]
     value = _values(table, dimension, problems)
     sigma, cov = _noise(table, value, dimension, problems)
     target, targets = used_names(target, targets)
     return Observations(
         t_s=table.number("t_s"),
         sensor=sensor,
-        sensors=tuple(sensors),
+        sensors=tuple(config.robots[me].sensors),
         target=target,
         targets=targets,
         value=value,
@@ -80,9 +78,7 @@ def _components(dimension: int) -> list[str]:
     return [c for c in VALUE_COLUMNS if c in known]
 
 
-def _any_component(
-    table: Table, spec: schema.Table, dimension: int, problems: Problems
-) -> bool:
+def _any_component(table: Table, spec: schema.Table, dimension: int, problems: Problems) -> bool:
     names = _components(dimension)
     if any(table.has(n) for n in names):
         return True
@@ -107,41 +103,24 @@ def _drop_blind(table: Table, dimension: int, problems: Problems) -> Table:
 def _names(
     table: Table,
     column: str,
-    sensors: Sequence[str],
-    robots: Sequence[str],
     me: str,
+    config: Config,
     problems: Problems,
 ) -> tuple[NDArray[np.int64], NDArray[np.int64], tuple[str, ...]]:
     """Codes of sensors and targets, and the names of the targets."""
     require_names(table, "sensor", problems)
     require_names(table, column, problems)
-    sensor = known_names(table, "sensor", sensors, f"sensor of {me}", problems)
+    sensor = known_names(
+        table, "sensor", tuple(config.robots[me].sensors), f"sensor of {me}", problems
+    )
     if column == "landmark":
         names = table.texts[column]
         return sensor, names.code, names.names
-    others = tuple(sorted(robots))
+    others = tuple(sorted(config.robots))
     target = known_names(table, column, others, "robot", problems)
     itself = target == others.index(me)
     table.complain(problems, itself, column, "the robot meets itself", "drop the row or rename")
     return sensor, target, others
-
-
-def _drop_copies(
-    table: Table,
-    sensor: NDArray[np.int64],
-    target: NDArray[np.int64],
-    problems: Problems,
-) -> tuple[Table, NDArray[np.int64], NDArray[np.int64]]:
-    """A row that repeats another one entirely is no second observation."""
-    content = np.column_stack([sensor, target, table.matrix(tuple(table.numbers))])
-    extra = copies(table.number("t_s"), content)
-    if extra.size == 0:
-        return table, sensor, target
-    message, mend = "repeats another row entirely", "the first one is kept"
-    table.complain(problems, extra, None, message, mend, mended=True)
-    keep = np.ones(table.n, dtype=bool)
-    keep[extra] = False
-    return table.take(keep), sensor[keep], target[keep]
 
 
 def _values(table: Table, dimension: int, problems: Problems) -> Floats:
@@ -173,13 +152,15 @@ def _refuse_mixture(table: Table, value: Floats, problems: Problems) -> None:
     seen = ~np.isnan(value)
     both = seen[:, _POLAR].any(axis=1) & seen[:, _CARTESIAN].any(axis=1)
     message = "has polar and Cartesian components"
-    table.complain(problems, both, "x_m", message, "keep one kind in a row")
+    table.complain(problems, np.asarray(both), "x_m", message, "keep one kind in a row")
 
 
 def _quaternions(table: Table, quaternion: Floats, problems: Problems) -> Floats:
     given = ~np.isnan(quaternion)
     part = given.any(axis=1) & ~given.all(axis=1)
-    table.complain(problems, part, "qx", "an incomplete quaternion", "give qx qy qz qw or none")
+    table.complain(
+        problems, np.asarray(part), "qx", "an incomplete quaternion", "give qx qy qz qw or none"
+    )
     return normalise(table, quaternion, problems)
 
 

@@ -12,7 +12,7 @@ from jointmap.frames import quaternion_to_matrix
 from jointmap.ingest.covariance import read_covariance
 from jointmap.ingest.degrees import check_heading, check_turn_rates
 from jointmap.ingest.problems import Problems
-from jointmap.ingest.stamps import copies, same_as_before, sort_by_time
+from jointmap.ingest.stamps import same_as_before, sort_by_time
 from jointmap.ingest.survey import Floats, Odometry
 from jointmap.ingest.table import Table
 from jointmap.ingest.values import (
@@ -38,9 +38,7 @@ def read_odometry(table: Table, dimension: int, problems: Problems) -> Odometry 
     return _twist_form(table, dimension, problems)
 
 
-def _form(
-    table: Table, dimension: int, problems: Problems
-) -> Literal["pose", "twist"] | None:
+def _form(table: Table, dimension: int, problems: Problems) -> Literal["pose", "twist"] | None:
     """Which form the files have; columns that are missing for it are reported."""
     pose, twist = schema.pose_columns(dimension), list(schema.twist_columns(dimension))
     if dimension == 2:
@@ -67,7 +65,7 @@ def _form(
 def _pose_form(table: Table, dimension: int, problems: Problems) -> Odometry:
     names = schema.pose_columns(dimension)
     require_numbers(table, names, problems)
-    table = _drop_copies(table, names, problems)
+    table = _drop_repeats(table, names, problems)
     pose = table.matrix(names)
     _refuse_two_poses(table, problems)
     if dimension == 2:
@@ -94,7 +92,7 @@ def _twist_form(table: Table, dimension: int, problems: Problems) -> Odometry:
     names = schema.twist_columns(dimension)
     needed = [n for n in names if n != "vy_mps" or dimension == 3]
     require_numbers(table, needed, problems)
-    table = _drop_copies(table, names, problems)
+    table = _drop_repeats(table, names, problems)
     table = _last_of_stamp(table, problems)
     twist = table.matrix(names)
     if dimension == 2:
@@ -117,18 +115,20 @@ def _given(table: Table, names: Sequence[str]) -> Floats | None:
     return table.matrix(names) if any(table.given(n) for n in names) else None
 
 
-def _drop_copies(table: Table, names: Sequence[str], problems: Problems) -> Table:
-    """Identical rows of one stamp count once."""
-    t = table.number("t_s")
-    if not same_as_before(t).any():
+def _drop_repeats(table: Table, names: Sequence[str], problems: Problems) -> Table:
+    """A row that repeats the one before it, stamp and all, counts once."""
+    again = same_as_before(table.number("t_s"))
+    if not again.any():
         return table
-    extra = copies(t, table.matrix(names))
-    if extra.size == 0:
-        return table
-    message = "repeats a row of the same stamp"
-    table.complain(problems, extra, "t_s", message, "the first one is kept", mended=True)
+    index = np.flatnonzero(again)
+    for name in names:
+        values = table.number(name)
+        same = values[index] == values[index - 1]
+        index = index[same | (np.isnan(values[index]) & np.isnan(values[index - 1]))]
+    message = "repeats the row before it"
+    table.complain(problems, index, "t_s", message, "the first one is kept", mended=True)
     keep = np.ones(table.n, dtype=bool)
-    keep[extra] = False
+    keep[index] = False
     return table.take(keep)
 
 
@@ -167,4 +167,3 @@ def to_body_axes(cov: Floats, pose: Floats, dimension: int) -> Floats:
     else:
         turn[:, :3, :3] = turn[:, 3:, 3:] = quaternion_to_matrix(pose[:, 3:])
     return np.asarray(np.swapaxes(turn, 1, 2) @ cov @ turn)
-

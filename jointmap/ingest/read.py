@@ -3,9 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import fields, is_dataclass, replace
+from dataclasses import dataclass, fields, is_dataclass, replace
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 
@@ -65,48 +64,48 @@ def read_survey(path: Path | str) -> Survey:
     config = read_config(files)
     if config is None:
         raise LogFormatError(problems.all())
-    survey = _read(files, config, problems)
+    survey = _read(files, config)
     problems.raise_refused()
     assert survey is not None  # nothing was refused, so there are robots
     survey = _finish(survey, problems)
     problems.raise_refused()
-    return _frozen(
-        replace(survey, problems=problems.all(), inputs=dict(sorted(files.digests.items())))
-    )
+    survey = replace(survey, problems=problems.all(), inputs=dict(sorted(files.digests.items())))
+    _freeze(survey)
+    return survey
 
 
-def _read(files: SurveyFiles, config: Config, problems: Problems) -> Survey | None:
+@dataclass(frozen=True)
+class _Wide:
+    """What belongs to the survey as a whole."""
+
+    control_points: ControlPoints | None
+    closures: Closures | None
+    associations: Associations | None
+    edits: Edits
+
+
+def _read(files: SurveyFiles, config: Config) -> Survey | None:
     """Every file of the survey; ``None`` when no robot is left."""
+    problems = files.problems
     logs: dict[str, RobotLog] = {}
     raw_fixes: dict[str, RawFixes] = {}
     for name, robot in config.robots.items():
-        log, fixes = _robot(files, config, robot, problems)
+        log, fixes = _robot(files, config, robot)
         if log is not None:
             logs[name] = log
         if fixes is not None:
             raw_fixes[name] = fixes
-    control, closures, associations = _wide(files, config, problems)
+    wide = _wide(files, config)
+    control = wide.control_points
     has_control = control is not None and len(control.landmarks) > 0
     placed, origin = place_fixes(raw_fixes, config, has_control, problems)
-    edits = _edits(files, config)
+    if config.datum_kind == "control" and not has_control and not raw_fixes:
+        message, mend = "there are neither control points nor fixes", 'choose kind = "landmarks"'
+        problems.add(FILE, message, f"give some, or {mend}", column="datum.kind")
     if not logs:
         if config.robots and not problems.refused:
             problems.add(FILE, "no robot has odometry", "name the odometry of at least one robot")
         return None
-    logs = {n: replace(log, fixes=placed.get(n)) for n, log in logs.items()}
-    return _assemble(files, config, logs, control, closures, associations, edits, origin)
-
-
-def _assemble(
-    files: SurveyFiles,
-    config: Config,
-    logs: Mapping[str, RobotLog],
-    control: ControlPoints | None,
-    closures: Closures | None,
-    associations: Associations | None,
-    edits: Edits,
-    origin: tuple[float, float, float] | None,
-) -> Survey:
     return Survey(
         path=files.folder.resolve(),
         name=config.name,
@@ -115,11 +114,11 @@ def _assemble(
         crs=config.crs,
         datum_kind=config.datum_kind,
         datum_robot=config.datum_robot or next(iter(logs)),
-        robots=logs,
-        closures=closures,
+        robots={n: replace(log, fixes=placed.get(n)) for n, log in logs.items()},
+        closures=wide.closures,
         control_points=control,
-        associations=associations,
-        edits=edits,
+        associations=wide.associations,
+        edits=wide.edits,
         geodetic_origin=origin,
     )
 
@@ -139,14 +138,11 @@ def _finish(survey: Survey, problems: Problems) -> Survey:
     return survey
 
 
-def _tables(
-    files: SurveyFiles, names: Sequence[str], kind: str, dimension: int, key: str
-) -> Table | None:
-    """The concatenated files of one kind; ``None`` when there are none or one is unusable."""
-    spec = schema.input_table(kind)
-    found = [read_table(files, n, spec, dimension, FILE, key) for n in names]
+def _tables(files: SurveyFiles, names: Sequence[str], kind: str, key: str) -> Table | None:
+    """The concatenated files of one kind, those that can be read; ``None`` when there are none."""
+    found = [read_table(files, n, schema.input_table(kind), FILE, key) for n in names]
     tables = [t for t in found if t is not None]
-    if not tables or len(tables) < len(found):
+    if not tables:
         return None
     for table in tables:
         if table.n == 0:
@@ -156,23 +152,21 @@ def _tables(
 
 
 def _robot(
-    files: SurveyFiles, config: Config, robot: RobotConfig, problems: Problems
+    files: SurveyFiles, config: Config, robot: RobotConfig
 ) -> tuple[RobotLog | None, RawFixes | None]:
     """Everything of one robot; no log when it has no odometry."""
+    problems = files.problems
     tables = {
-        kind: _tables(files, names, kind, config.dimension, f"robots.{robot.name}.{kind}")
+        kind: _tables(files, names, kind, f"robots.{robot.name}.{kind}")
         for kind, names in robot.files.items()
     }
-    observed = {}
-    for kind in ("sightings", "encounters"):
-        table = tables[kind]
-        observed[kind] = None if table is None else read_observations(
-            table, kind, config.dimension, tuple(robot.sensors), tuple(config.robots),
-            robot.name, problems,
-        )  # fmt: skip
-    fixes = tables["fixes"]
+    observed = {
+        kind: read_observations(table, kind, robot.name, config, problems)
+        for kind in ("sightings", "encounters")
+        if (table := tables[kind]) is not None
+    }
+    fixes, table = tables["fixes"], tables["odometry"]
     raw = None if fixes is None else read_fixes(fixes, config.dimension, problems)
-    table = tables["odometry"]
     odometry = None if table is None else read_odometry(table, config.dimension, problems)
     if odometry is None or len(odometry.t_s) == 0:
         if not robot.files["odometry"] or odometry is not None:
@@ -182,8 +176,8 @@ def _robot(
     log = RobotLog(
         name=robot.name,
         odometry=odometry,
-        sightings=observed["sightings"],
-        encounters=observed["encounters"],
+        sightings=observed.get("sightings"),
+        encounters=observed.get("encounters"),
         fixes=None,
         sensors=robot.sensors,
         clock=robot.clock,
@@ -196,24 +190,21 @@ def _robot(
     return log, raw
 
 
-def _wide(
-    files: SurveyFiles, config: Config, problems: Problems
-) -> tuple[ControlPoints | None, Closures | None, Associations | None]:
-    """The survey-wide tables that are present."""
-    tables: dict[str, Table | None] = {}
-    for kind in schema.DEFAULT_FILES:
+def _wide(files: SurveyFiles, config: Config) -> _Wide:
+    """The survey-wide files that are present."""
+    tables: dict[str, Table | None] = dict.fromkeys(schema.DEFAULT_FILES)
+    for kind in tables:
         name = files.default(kind)
-        tables[kind] = None
         if name is not None:
-            tables[kind] = _tables(files, [name], kind, config.dimension, kind)
-    robots = tuple(config.robots)
-    control, closures, named = (
-        tables[k] for k in ("control_points", "closures", "associations")
-    )
-    return (
-        None if control is None else read_control(control, config.dimension, problems),
-        None if closures is None else read_closures(closures, config.dimension, robots, problems),
+            tables[kind] = _tables(files, [name], kind, kind)
+    robots, dimension, problems = tuple(config.robots), config.dimension, files.problems
+    control, closures = tables["control_points"], tables["closures"]
+    named = tables["associations"]
+    return _Wide(
+        None if control is None else read_control(control, dimension, problems),
+        None if closures is None else read_closures(closures, dimension, robots, problems),
         None if named is None else read_associations(named, robots, problems),
+        _edits(files, config),
     )
 
 
@@ -224,16 +215,13 @@ def _edits(files: SurveyFiles, config: Config) -> Edits:
     return read_edits(files, {n: tuple(r.sensors) for n, r in config.robots.items()})
 
 
-def _frozen(value: Any) -> Any:
-    """Make every array inside a frozen dataclass read-only."""
+def _freeze(value: object) -> None:
+    """Make every array inside a dataclass read-only."""
     if isinstance(value, np.ndarray):
         value.setflags(write=False)
     elif isinstance(value, Mapping):
         for item in value.values():
-            _frozen(item)
+            _freeze(item)
     elif is_dataclass(value) and not isinstance(value, type):
         for one in fields(value):
-            _frozen(getattr(value, one.name))
-    return value
-
-
+            _freeze(getattr(value, one.name))

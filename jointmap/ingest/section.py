@@ -25,8 +25,8 @@ def load_toml(files: SurveyFiles, name: str) -> dict[str, Any] | None:
     try:
         return tomllib.loads(data.decode("utf-8"))
     except UnicodeDecodeError as error:
-        row = data[: error.start].count(b"\n") + 1
-        files.problems.add(name, "the text is not UTF-8", "save the file as UTF-8", row=row)
+        line = data[: error.start].count(b"\n") + 1
+        files.problems.add(name, "the text is not UTF-8", "save the file as UTF-8", row=line)
     except tomllib.TOMLDecodeError as error:
         found = re.search(r"line (\d+)", str(error))
         row = int(found.group(1)) if found else None

@@ -2,12 +2,18 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
 from jointmap.ingest.problems import Problems
 from jointmap.ingest.survey import Floats, Ints
 from jointmap.ingest.table import Table
+
+#: Odd multiplier that spreads bits (the golden ratio of 2^64).
+_PRIME = 0x9E3779B97F4A7C15
 
 
 def sort_by_time(table: Table, problems: Problems, column: str = "t_s") -> Table:
@@ -37,18 +43,59 @@ def same_as_before(t: Floats) -> NDArray[np.bool_]:
     return out
 
 
-def copies(t: Floats, content: Floats) -> Ints:
+def copies(t: Floats, columns: Sequence[NDArray[Any]]) -> Ints:
     """Rows of a table sorted by time that repeat an earlier row of the same stamp entirely.
 
-    ``content`` (n, m) holds everything else in a row; NaN equals NaN.
+    ``columns`` hold everything else in a row, each (n,); NaN equals NaN.
     """
     tied = same_as_before(t)
     tied[:-1] |= tied[1:]
     index = np.flatnonzero(tied)
+    # Exact comparison sorts whole rows, which is slow: only for rows that share a hash.
+    index = index[_repeated(_hashes([t, *columns], index))]
     if index.size == 0:
-        return np.empty(0, dtype=np.int64)
-    rows = np.column_stack([t[index], content[index]]) + 0.0  # -0.0 becomes 0.0
-    _, first = np.unique(np.where(np.isnan(rows), np.inf, rows), axis=0, return_index=True)
-    keep = np.zeros(index.size, dtype=bool)
-    keep[first] = True
-    return np.asarray(index[~keep])
+        return index
+    rows = np.column_stack([_canonical(c[index]) for c in (t, *columns)])
+    _, first = np.unique(rows, axis=0, return_index=True)
+    again = np.ones(index.size, dtype=bool)
+    again[first] = False
+    return index[again]
+
+
+def drop_copies(
+    table: Table, columns: Sequence[NDArray[Any]], t: Floats, problems: Problems
+) -> NDArray[np.bool_]:
+    """Report rows that repeat another one entirely; returns which rows to keep."""
+    extra = copies(t, columns)
+    message, mend = "repeats another row entirely", "the first one is kept"
+    table.complain(problems, extra, None, message, mend, mended=True)
+    keep = np.ones(table.n, dtype=bool)
+    keep[extra] = False
+    return keep
+
+
+def _canonical(values: NDArray[Any]) -> Ints:
+    """Bit patterns that are equal where the numbers are; one NaN, one zero."""
+    numbers = np.asarray(values, dtype=np.float64) + 0.0
+    numbers[np.isnan(numbers)] = np.nan
+    return numbers.view(np.int64)
+
+
+def _hashes(columns: Sequence[NDArray[Any]], index: Ints) -> NDArray[np.uint64]:
+    """One number per row; equal rows have equal numbers."""
+    mixed = np.zeros(index.size, dtype=np.uint64)
+    for column in columns:
+        mixed = (mixed ^ _canonical(column[index]).view(np.uint64)) * np.uint64(_PRIME)
+        mixed ^= mixed >> np.uint64(29)
+    return mixed
+
+
+def _repeated(keys: NDArray[np.uint64]) -> NDArray[np.bool_]:
+    """Which keys occur more than once."""
+    order = np.argsort(keys, kind="stable")
+    again = np.zeros(keys.size, dtype=bool)
+    again[1:] = keys[order[1:]] == keys[order[:-1]]
+    again[:-1] |= again[1:]
+    out = np.zeros(keys.size, dtype=bool)
+    out[order] = again
+    return out

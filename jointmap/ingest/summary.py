@@ -34,9 +34,10 @@ class Gap:
 class RobotSummary:
     """One robot: times by its own clock, counts of rows.
 
-    ``path_m`` is the length of its odometry (twist form: gaps count for nothing). ``met`` counts
-    its encounters by robot, ``met_by`` those of others with it, ``shared`` names the landmarks
-    that it and each other robot sighted. ``last_observation_s`` is the last time when it observed
+    ``rate_hz`` counts rows per second outside the gaps. ``path_m`` is the length of its odometry
+    (twist form: gaps count for nothing). ``met`` counts its encounters by robot, ``met_by`` those
+    of others with it, ``shared`` names the landmarks that it and each other robot sighted.
+    ``last_observation_s`` is the last time when it observed
     anything (``None``: never); what comes later is dead reckoning unless others saw it.
     """
 
@@ -99,7 +100,9 @@ def summarise(survey: Survey) -> SurveySummary:
         n_landmarks=len(times),
         n_shared_landmarks=sum(n > 1 for n in times.values()),
         n_closures=0 if survey.closures is None else len(survey.closures.t_a_s),
-        n_control_points=0 if survey.control_points is None else len(survey.control_points.landmarks),
+        n_control_points=0
+        if survey.control_points is None
+        else len(survey.control_points.landmarks),
         n_associations=None if survey.associations is None else len(survey.associations.robots),
         n_edits=sum(map(len, (edits.associations, edits.masks, edits.splits, edits.values))),
         geodetic_origin=survey.geodetic_origin,
@@ -119,12 +122,11 @@ def _landmarks(survey: Survey, log: RobotLog) -> tuple[str, ...]:
     return landmarks_of(log.name, log.sightings, survey.associations)[1]
 
 
-def _robot(
-    survey: Survey, log: RobotLog, names: Mapping[str, tuple[str, ...]]
-) -> RobotSummary:
+def _robot(survey: Survey, log: RobotLog, names: Mapping[str, tuple[str, ...]]) -> RobotSummary:
     odometry = log.odometry
-    step = float(np.median(np.diff(odometry.t_s))) if len(odometry.t_s) > 1 else 0.0
     gaps = find_gaps(odometry.t_s)
+    logged_s = float(odometry.t_s[-1] - odometry.t_s[0]) - sum(g.length_s for g in gaps)
+    steps = len(odometry.t_s) - 1 - len(gaps)
     tables = (log.sightings, log.encounters)
     mine = set(names[log.name])
     others = [r for r in survey.robots if r != log.name]
@@ -135,7 +137,7 @@ def _robot(
         t_first_s=float(odometry.t_s[0]),
         t_last_s=float(odometry.t_s[-1]),
         n_odometry=len(odometry.t_s),
-        rate_hz=1.0 / step if step > 0.0 else None,
+        rate_hz=steps / logged_s if logged_s > 0.0 else None,
         gaps=gaps,
         path_m=path_length(odometry),
         n_sightings=0 if log.sightings is None else len(log.sightings.t_s),
@@ -241,7 +243,7 @@ def summary_lines(summary: SurveySummary) -> list[str]:
         lines.append(f"origin of the site frame: {lat:.9f} {lon:.9f} deg, {height:.3f} m")
     for robot in summary.robots:
         lines += ["", *_robot_lines(robot)]
-    return lines + ["", *_problem_lines(summary.problems)]
+    return [*lines, "", *_problem_lines(summary.problems)]
 
 
 def _count(n: int, word: str) -> str:

@@ -190,7 +190,10 @@ class AssociationEdit:
 
 @dataclass(frozen=True)
 class MaskEdit:
-    """Ignore a robot's rows in [t_from_s, t_to_s] of its own clock; ``sensor`` None = odometry too is kept, all its sensors are masked."""
+    """Ignore what a robot's sensor saw in [t_from_s, t_to_s] of its own clock.
+
+    ``sensor`` None masks all its sensors; the odometry is kept in any case.
+    """
 
     robot: str
     sensor: str | None

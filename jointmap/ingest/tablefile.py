@@ -21,7 +21,7 @@ from jointmap.ingest.table import Names, Table
 
 
 def read_table(
-    files: SurveyFiles, name: str, spec: schema.Table, dimension: int, asked_by: str, key: str
+    files: SurveyFiles, name: str, spec: schema.Table, asked_by: str, key: str
 ) -> Table | None:
     """One file of the survey as a table; ``None`` when nothing of it can be used.
 
@@ -36,9 +36,9 @@ def read_table(
         files.problems.add(name, "unknown kind of file", f"name it with one of {ends}")
         return None
     if name.endswith(".parquet"):
-        parsed = _read_parquet(files, path, name, spec, dimension)
+        parsed = _read_parquet(files, path, name, spec)
     else:
-        parsed = _read_csv(files, path, name, spec, dimension)
+        parsed = _read_csv(files, path, name, spec)
     return None if parsed is None else _to_table(parsed, name, files.problems)
 
 
@@ -49,9 +49,7 @@ def _mapped(path: Path) -> memoryview:
     return memoryview(pa.memory_map(str(path)).read_buffer())
 
 
-def _read_csv(
-    files: SurveyFiles, path: Path, name: str, spec: schema.Table, dimension: int
-) -> Parsed | None:
+def _read_csv(files: SurveyFiles, path: Path, name: str, spec: schema.Table) -> Parsed | None:
     data = _mapped(path)
     files.digest(name, data)
     if name.endswith(".gz"):
@@ -64,18 +62,16 @@ def _read_csv(
     if not any(header):
         files.problems.add(name, "no header in the first line", "write the header row", row=1)
         return None
-    kinds = _kinds(header, spec, dimension, name, files.problems, row=1)
+    kinds = _kinds(header, spec, name, files.problems, row=1)
     return None if kinds is None else parse_csv(data, name, header, kinds, files.problems)
 
 
-def _read_parquet(
-    files: SurveyFiles, path: Path, name: str, spec: schema.Table, dimension: int
-) -> Parsed | None:
+def _read_parquet(files: SurveyFiles, path: Path, name: str, spec: schema.Table) -> Parsed | None:
     data = _mapped(path)
     files.digest(name, data)
     try:
         source = pq.ParquetFile(pa.BufferReader(pa.py_buffer(data)))
-        kinds = _kinds(source.schema_arrow.names, spec, dimension, name, files.problems, row=None)
+        kinds = _kinds(source.schema_arrow.names, spec, name, files.problems, row=None)
         table = source.read(columns=list(kinds or ()))
     except (pa.ArrowException, OSError) as error:
         files.problems.add(name, f"is no readable Parquet file ({error})", "write it again")
@@ -116,7 +112,6 @@ def _cast(column: pa.ChunkedArray, kind: str) -> pa.ChunkedArray | None:
 def _kinds(
     header: Sequence[str],
     spec: schema.Table,
-    dimension: int,
     name: str,
     problems: Problems,
     row: int | None,
@@ -130,8 +125,7 @@ def _kinds(
         message = "the header names the column more than once"
         problems.add(name, message, "keep one of them", row=row, column=column)
     known = known_columns(spec)
-    unknown = [h for h in header if h not in known]
-    _report_unknown(unknown, header, known, name, problems, row)
+    _report_unknown(header, known, name, problems, row)
     return None if doubled else {h: known[h] for h in header if h in known}
 
 
@@ -147,13 +141,13 @@ def known_columns(spec: schema.Table) -> dict[str, str]:
 
 
 def _report_unknown(
-    unknown: Sequence[str],
     header: Sequence[str],
     known: Mapping[str, str],
     name: str,
     problems: Problems,
     row: int | None,
 ) -> None:
+    unknown = [h for h in header if h not in known]
     if not unknown:
         return
     if len(header) == 1 and any(mark in header[0] for mark in ";\t"):
@@ -195,7 +189,7 @@ def _floats(values: pa.ChunkedArray) -> Floats:
 
 
 def seconds_of(values: pa.ChunkedArray) -> Floats:
-    """Whole nanoseconds to seconds; the whole seconds are split off first to keep the rest exact."""
+    """Whole nanoseconds to seconds; the whole ones are split off first to keep the rest exact."""
     missing = values.is_null().to_numpy()
     whole: Ints = pc.fill_null(values, 0).to_numpy().astype(np.int64)
     seconds, rest = np.divmod(whole, 1_000_000_000)

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from jointmap import schema
 from jointmap.ingest.problems import Problems, did_you_mean
 from jointmap.ingest.survey import Floats, Ints
-from jointmap.ingest.table import Names, Table
+from jointmap.ingest.table import Table
 
 TURN = 2.0 * np.pi
 #: Angles may pass a full turn by rounding, not by more.
@@ -152,8 +152,8 @@ def normalise(table: Table, quaternion: Floats, problems: Problems) -> Floats:
         message += [message[-1]] * (int(wrong.sum()) - len(message))
         table.complain(problems, wrong, "qx", message, "write a unit quaternion qx qy qz qw")
     if off.any():
-        message = "quaternion of a length other than one"
-        table.complain(problems, off, "qx", message, "it is normalised", mended=True)
+        notice = "quaternion of a length other than one"
+        table.complain(problems, off, "qx", notice, "it is normalised", mended=True)
     return unit
 
 
@@ -163,8 +163,3 @@ def used_names(code: Ints, names: Sequence[str]) -> tuple[Ints, tuple[str, ...]]
     to = np.full(len(names) + 1, -1, dtype=np.int64)
     to[used] = np.arange(len(used))
     return to[code], tuple(names[i] for i in used)
-
-
-def as_names(code: Ints, names: Sequence[str]) -> Names:
-    """Names without unused entries."""
-    return Names(*used_names(code, names))

@@ -85,9 +85,7 @@ def _per_component() -> tuple[Column, ...]:
         for name in COMPONENTS:
             dimensions = (3,) if name in _ONLY_3D else (2,) if name == "yaw_rad" else (2, 3)
             unit = name.rsplit("_", 1)[1]
-            columns.append(
-                Column(f"{prefix}_{name}", "float64", unit, meaning, False, dimensions)
-            )
+            columns.append(Column(f"{prefix}_{name}", "float64", unit, meaning, False, dimensions))
     return tuple(columns)
 
 
@@ -187,4 +185,3 @@ OUTPUT_TABLES: tuple[Table, ...] = (
 def output_table(name: str) -> Table:
     """The output table of this name; ``KeyError`` when there is none."""
     return {table.name: table for table in OUTPUT_TABLES}[name]
-
