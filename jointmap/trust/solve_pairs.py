@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from jointmap.trust import kernels
+from jointmap.trust import solve_kernels
 from jointmap.trust.clique_tree import CliqueTree
 
 Floats = NDArray[np.float64]
@@ -52,7 +52,9 @@ class SquareRootFactor:
         if b.shape[0] != tree.n_scalars:
             raise ValueError(f"the right-hand side has {b.shape[0]} rows, not {tree.n_scalars}")
         x = np.array(b.reshape(len(b), -1), order="C")
-        kernels.solve(tree.panel, tree.panel_start, tree.rows, tree.column_start, tree.columns, x)
+        solve_kernels.solve(
+            tree.panel, tree.panel_start, tree.rows, tree.column_start, tree.columns, x
+        )
         return x.reshape(b.shape)
 
     def joint(self, i_keys: ArrayLike, j_keys: ArrayLike) -> Floats:
@@ -79,7 +81,7 @@ class SquareRootFactor:
         order = np.argsort(first, kind="stable")
         out = np.empty((len(first), d + e, d + e))
         tree = self.tree
-        kernels.joint_blocks(
+        solve_kernels.joint_blocks(
             tree.panel, tree.panel_start, tree.rows, tree.column_start, tree.columns, tree.parent,
             tree.offset, tree.clique_of, first[order], second[order], d, e, out,
         )  # fmt: skip

@@ -5,10 +5,11 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import gtsam
+import gtsam_unstable
 import numpy as np
 
 from jointmap.trust.elimination import clique_tree, eliminate
-from jointmap.trust.marginals import SelectedInverse, selected_inverse_of
+from jointmap.trust.marginals import SelectedInverse, selected_inverse, selected_inverse_of
 from jointmap.trust.redundancy import redundancy_matrices
 from jointmap.trust.solve_pairs import SquareRootFactor
 
@@ -163,3 +164,55 @@ def landmark_graph(dimension: int, poses: int = 60, landmarks: int = 25):
             graph.add(between(i, i + 1, motion, noise))
         pose = pose.compose(motion)
     return graph, values, np.repeat([dof, dimension], [poses, landmarks])
+
+
+def redundancies(graph, values, dims):
+    """Selected inverse, and the redundancy matrix of every factor of a nonlinear graph."""
+    linear = graph.linearize(values)
+    inverse = selected_inverse(eliminate(linear), dims)
+    matrices = []
+    for index in range(linear.size()):
+        factor = linear.at(index)
+        keys = factor.keys()
+        whole = np.asarray(factor.jacobian()[0])
+        parts = np.split(whole[None], np.cumsum(dims[keys])[:-1], axis=2)
+        matrices.append(redundancy_matrices([np.array([k]) for k in keys], parts, inverse)[0])
+    return inverse, matrices
+
+
+def landmark_file(name: str):
+    """Odometry and Cartesian sightings with square-root information, at the optimum.
+
+    Lines EDGE_SE2 and LANDMARK2 of a file of gtsam/Data; poses come first in the key order.
+    """
+    with open(gtsam.findExampleDataFile(name)) as lines:
+        words = [line.split() for line in lines]
+    edges = [w for w in words if w[0] == "EDGE_SE2"]
+    sightings = [w for w in words if w[0] == "LANDMARK2"]
+    pose = {k: n for n, k in enumerate(sorted({int(k) for w in edges for k in w[1:3]}))}
+    point = {k: len(pose) + n for n, k in enumerate(sorted({int(w[2]) for w in sightings}))}
+    graph, values = gtsam.NonlinearFactorGraph(), gtsam.Values()
+    values.insert(0, gtsam.Pose2())
+    for w in edges:
+        i, j, motion = pose[int(w[1])], pose[int(w[2])], gtsam.Pose2(*map(float, w[3:6]))
+        if not values.exists(j):
+            values.insert(j, values.atPose2(i).compose(motion))
+        graph.add(gtsam.BetweenFactorPose2(i, j, motion, _root_noise(w[6:], 3)))
+    for w in sightings:
+        i, j, seen = pose[int(w[1])], point[int(w[2])], np.array(w[3:5], float)
+        if not values.exists(j):
+            values.insert(j, values.atPose2(i).transformFrom(seen))
+        graph.add(gtsam_unstable.DeltaFactor(i, j, seen, _root_noise(w[5:], 2)))
+    held = gtsam.noiseModel.Isotropic.Sigma(3, 1e-3)
+    graph.add(gtsam.PriorFactorPose2(0, gtsam.Pose2(), held))
+    params = gtsam.LevenbergMarquardtParams()
+    params.setRelativeErrorTol(1e-12)
+    params.setAbsoluteErrorTol(1e-12)
+    values = gtsam.LevenbergMarquardtOptimizer(graph, values, params).optimize()
+    return graph, values, np.repeat([3, 2], [len(pose), len(point)])
+
+
+def _root_noise(words, dim):
+    root = np.zeros((dim, dim))
+    root[np.triu_indices(dim)] = np.array(words, float)
+    return gtsam.noiseModel.Gaussian.Information(root.T @ root)

@@ -6,7 +6,7 @@ import gtsam
 import numpy as np
 import pytest
 import statsmodels.api as sm
-from adjustment_networks import adjust, planar_slam, sphere2500
+from adjustment_networks import adjust, landmark_file, planar_slam, redundancies, sphere2500
 from scipy.stats import chi2, ncx2
 from statsmodels.datasets import stackloss
 
@@ -26,7 +26,7 @@ from jointmap.trust.redundancy import (
     vector_mdb,
     vector_test,
 )
-from jointmap.trust.variance import variance_factors
+from jointmap.trust.variance import variance_factor, variance_factors
 
 
 @pytest.mark.parametrize(
@@ -102,20 +102,6 @@ def test_b5_stackloss_against_statsmodels():
     np.testing.assert_allclose(tested.w[[0, 2, 3, 20], 0], printed, atol=5.1e-6)
 
 
-def redundancies(graph, values, dims):
-    """Selected inverse, and the redundancy matrix of every factor of a nonlinear graph."""
-    linear = graph.linearize(values)
-    inverse = selected_inverse(eliminate(linear), dims)
-    matrices = []
-    for index in range(linear.size()):
-        factor = linear.at(index)
-        keys = factor.keys()
-        whole = np.asarray(factor.jacobian()[0])
-        parts = np.split(whole[None], np.cumsum(dims[keys])[:-1], axis=2)
-        matrices.append(redundancy_matrices([np.array([k]) for k in keys], parts, inverse)[0])
-    return inverse, matrices
-
-
 def test_i1_planar_slam_redundancy():
     """Sum 2.000 = 15 - 13; the prior, the second odometry and the last sighting are unchecked."""
     graph, values, dims = planar_slam()
@@ -156,6 +142,59 @@ def test_i3_sphere2500_redundancy():
     # The simulated noise is Gaussian up to its Euler angles: 5 % of the p-values below 0.05.
     share = np.mean(tested.p_value < 0.05)
     assert abs(share - 0.05) < 4 * np.sqrt(0.05 * 0.95 / len(r))
+
+
+@pytest.mark.parametrize(
+    ("name", "dimension", "half_objective", "dof"),
+    [
+        ("noisyToyGraph.txt", 2, 0.0683428242, 6),
+        ("pose2example.txt", 2, 0.5494864475, 6),
+        ("pose3example-grid.txt", 3, 43.49865834, 108),
+        ("Klaus3.g2o", 3, 0.00702779177, 6),
+    ],
+)
+def test_i4_redundancy_of_small_public_graphs(name, dimension, half_objective, dof):
+    """Half objective by gtsam 4.3.0; rows less unknowns."""
+    space = dimension == 3
+    graph, values = gtsam.readG2o(gtsam.findExampleDataFile(name), space)
+    noise = gtsam.noiseModel.Isotropic.Sigma(6 if space else 3, 1e-3)
+    prior, at = (
+        (gtsam.PriorFactorPose3, values.atPose3)
+        if space
+        else (gtsam.PriorFactorPose2, values.atPose2)
+    )
+    graph.add(prior(0, at(0), noise))
+    params = gtsam.LevenbergMarquardtParams()
+    params.setRelativeErrorTol(1e-13)
+    params.setAbsoluteErrorTol(1e-13)
+    values = gtsam.LevenbergMarquardtOptimizer(graph, values, params).optimize()
+    assert graph.error(values) == pytest.approx(half_objective, rel=1e-7)
+    _, matrices = redundancies(graph, values, np.full(values.size(), 6 if space else 3))
+    r = [np.trace(m) for m in matrices]
+    # The prior is the datum: r = 0, up to the rounding of its information of 1e6.
+    assert r[-1] == pytest.approx(0.0, abs=1e-8)
+    assert sum(r) == pytest.approx(dof, abs=1e-7)
+
+
+@pytest.mark.parametrize(
+    ("name", "square", "dof", "factor"),
+    [
+        ("cityTrees_reduced_1k.g2o", 685.5281, 680, 1.00813),
+        ("victoriaPark_reduced_1k.g2o", 1776.4745, 1116, 1.5918),
+    ],
+)
+def test_i5_landmark_graphs(name, square, dof, factor):
+    """Simulated trees fit their stated sigmas; the real park does not: 1.59 is outside the band."""
+    graph, values, dims = landmark_file(name)
+    assert 2 * graph.error(values) == pytest.approx(square, abs=5.1e-5)
+    _, matrices = redundancies(graph, values, dims)
+    r = np.array([np.trace(m) for m in matrices])
+    assert r.sum() == pytest.approx(dof, abs=1e-5)
+    v2 = np.array([2 * graph.at(f).error(values) for f in range(graph.size())])
+    found = variance_factor(v2, r)
+    assert found.s2 == pytest.approx(factor, abs=5.1e-5)
+    inside = abs(found.sigma_ratio - 1) < 1.96 * found.std
+    assert inside == (name == "cityTrees_reduced_1k.g2o")
 
 
 def noisy_network(seed: int):
