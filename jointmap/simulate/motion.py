@@ -28,6 +28,8 @@ from jointmap.simulate.team import RobotSpec
 Floats = NDArray[np.float64]
 
 _GRAVITY = 9.80665
+#: Deceleration of a quadrotor by the air per m/s, 1/s.
+_DRAG = 0.5
 #: Height of a crawler's body frame above the floor, metres.
 _CRAWLER_HEIGHT_M = 0.25
 #: Gains that bring a crawler back to its plan: 1/s, 1/m^2, 1/m.
@@ -199,7 +201,7 @@ def _fly(plan: Plan, route: Route, t: Floats, rng: np.random.Generator) -> Float
     z = gaussian_filter1d(plan.floor(uv), 0.6 * rate, mode="nearest") + np.clip(height, 0.6, 2.4)
     place = np.column_stack([xy, z])
     speed = np.gradient(place, t, axis=0)
-    push = np.gradient(speed, t, axis=0) + 0.3 * speed + np.array([0.0, 0.0, _GRAVITY])
+    push = np.gradient(speed, t, axis=0) + _DRAG * speed + np.array([0.0, 0.0, _GRAVITY])
     # thrust along body z; heading fixes the rest
     c, s = np.cos(look), np.sin(look)
     roll_axis = c * push[:, 0] + s * push[:, 1], c * push[:, 1] - s * push[:, 0]

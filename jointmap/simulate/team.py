@@ -96,7 +96,7 @@ BASE_TILT_RAD = 0.003
 
 _LIMITS = {
     "crawler": Limits(speed=0.8, acceleration=0.3, lateral=0.25, rate=0.7),
-    "quadrotor": Limits(speed=1.4, acceleration=0.6, lateral=0.6, rate=0.9),
+    "quadrotor": Limits(speed=1.4, acceleration=1.0, lateral=1.0, rate=0.9),
 }
 #: Yaw of the first to fourth sensor of a crawler and of a quadrotor, radians.
 _SENSOR_YAW = {"front": 0.0, "left": 1.75, "right": -1.75, "rear": 3.0}
