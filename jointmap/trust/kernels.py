@@ -113,7 +113,9 @@ def _clique_covariance(block, f, w, outer):  # type: ignore[no-untyped-def]
 
 
 @numba.njit(cache=True)
-def selected_inverse(panel, start, rows, column_start, columns, parent, n):  # type: ignore[no-untyped-def]
+def selected_inverse(  # type: ignore[no-untyped-def]
+    panel, start, rows, column_start, columns, parent, n
+):
     """Covariance panels [Sigma_FF Sigma_FS] of every clique, laid out as the panels of R.
 
     Depth first, so that the full covariances of the cliques on the path from the root are all

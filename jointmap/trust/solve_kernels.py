@@ -46,7 +46,9 @@ def forward(panel, start, rows, column_start, columns, c, x):  # type: ignore[no
 
 
 @numba.njit(cache=True)
-def _unit_columns(panel, start, rows, column_start, columns, parent, c, scalar, d, work, touched):  # type: ignore[no-untyped-def]
+def _unit_columns(  # type: ignore[no-untyped-def]
+    panel, start, rows, column_start, columns, parent, c, scalar, d, work, touched
+):
     """Solve R' y = E (unit columns of one key) along the path to the root; returns the count.
 
     ``work`` must be zero where it is touched; the frontal scalars on the path are listed in

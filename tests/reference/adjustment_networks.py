@@ -102,7 +102,7 @@ def sphere2500():
 
 
 def planar_slam():
-    """Three poses 0 1 2 and two landmarks 3 4 (source: gtsam testMarginals.cpp, planarSLAMmarginals)."""
+    """Three poses 0 1 2 and two landmarks 3 4 (source: gtsam testMarginals.cpp)."""
     graph, values = gtsam.NonlinearFactorGraph(), gtsam.Values()
     sigma = gtsam.noiseModel.Diagonal.Sigmas
     graph.add(gtsam.PriorFactorPose2(0, gtsam.Pose2(), sigma(np.array([0.3, 0.3, 0.1]))))
