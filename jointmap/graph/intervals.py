@@ -175,12 +175,10 @@ def find_gaps(made: Cumulative, max_gap_s: float | None = None) -> Gaps:
     hole = np.where(length > limit, length, 0.0)
     usable = np.flatnonzero((length > 0.0) & (hole == 0.0))
     usable = usable[:: max(1, len(usable) // _SAMPLE)]
-    turns = PLANAR[2] if made.dimension == 2 else slice(0, 3)
-    moves = slice(0, 2) if made.dimension == 2 else slice(3, 6)
+    moves, turns = ([0, 1], [2]) if made.dimension == 2 else ([3, 4, 5], [0, 1, 2])
     speed2 = np.zeros(2)
     for side, columns in enumerate((moves, turns)):
-        part = made.tangents[usable][:, columns].reshape(len(usable), -1)
-        rate = np.linalg.norm(part, axis=1) / length[usable]
+        rate = np.linalg.norm(made.tangents[usable][:, columns], axis=1) / length[usable]
         rate = rate[rate > 0.0]
         speed2[side] = np.quantile(rate, SPEED_QUANTILE) ** 2 if len(rate) else 0.0
     return Gaps(hole, speed2)
