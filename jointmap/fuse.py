@@ -30,7 +30,7 @@ from jointmap.products.assemble import assemble
 from jointmap.products.reference import Reference
 from jointmap.progress import Progress, Silent
 from jointmap.settings import Settings
-from jointmap.solve import kernels
+from jointmap.solve.kernels import Kernel
 from jointmap.solve.associations import Evidence, Review, review
 from jointmap.solve.decisions import Decisions, gate_rows, statistic_scale
 from jointmap.solve.optimise import Optimised, OptimiseSettings, optimise
@@ -166,7 +166,7 @@ def _drop_loose(run: _Run) -> None:
 def _system(run: _Run, *, robust: bool, used: tuple[Bools, ...] | None = None) -> System:
     kernel = None
     if robust and run.settings.kernel != "none":
-        kernel = kernels.make(run.settings.kernel, run.settings.kernel_constant)
+        kernel = Kernel(run.settings.kernel, run.settings.kernel_constant)
     whiten = whiten_blocks(run.problem, run.noise)
     sensitivity = odometry_sensitivity(run.problem, run.survey, run.calibration)
     decisions = run.decisions if used is None else replace(run.decisions, used=used)

@@ -40,7 +40,7 @@ def assemble(outcome: Outcome, settings: Settings, progress: Progress) -> Refere
     expressed = express(
         problem, outcome.system, outcome.state, outcome.quality, trust, kind, robot
     )
-    paths = trajectories(outcome, expressed, trust)
+    paths = trajectories(outcome, expressed, trust, settings.gap_s)
     robots = robot_table(outcome, expressed, paths)
     measurements = measurement_table(outcome)
     landmarks = landmark_table(outcome, expressed, trust)
@@ -135,8 +135,10 @@ def _state(outcome: Outcome, expressed: Expressed) -> dict[str, Any]:
     }
     out |= {f"datum_{k}": v for k, v in expressed.transform.to_arrays().items()}
     out |= {
-        "poses": expressed.state.poses,
-        "landmarks": expressed.state.landmarks,
+        "poses": outcome.state.poses,
+        "landmarks": outcome.state.landmarks,
+        "map_shift": expressed.shift,
+        "component": outcome.quality.gauge.component,
         "keyframe_t_s": problem.keyframes.t_s,
         "keyframe_first": problem.keyframes.first,
         "robots": np.array(problem.robots),
@@ -150,8 +152,8 @@ def _state(outcome: Outcome, expressed: Expressed) -> dict[str, Any]:
         "landmark_name": np.array(problem.tracks.landmarks or [""]),
         "linked_track": outcome.system.links.track,
     }
-    if expressed.state.orientations is not None:
-        out["orientations"] = expressed.state.orientations
+    if outcome.state.orientations is not None:
+        out["orientations"] = outcome.state.orientations
     return out
 
 

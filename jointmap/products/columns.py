@@ -99,7 +99,7 @@ def _typed(values: pd.Series[Any], column: Column) -> pd.Series[Any]:
 
 def _null(n: int, column: Column) -> pd.Series[Any]:
     fill = np.nan if column.dtype == "float64" else None
-    return pd.Series([fill] * n, dtype=_DTYPES[column.dtype])  # type: ignore[call-overload, no-any-return]
+    return pd.Series([fill] * n, dtype=_DTYPES[column.dtype])
 
 
 def table_covariance_columns(dimension: int) -> tuple[str, ...]:

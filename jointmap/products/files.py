@@ -120,9 +120,7 @@ def write_csv(frame: pd.DataFrame, path: Path) -> None:
     for name in shown.columns[shown.dtypes == "boolean"]:
         shown[name] = shown[name].map({True: "true", False: "false"}).astype("object")
     packing: Any = {"method": "gzip", "mtime": 0} if path.name.endswith(".gz") else None
-    shown.to_csv(
-        path, index=False, lineterminator="\n", encoding="utf-8", compression=packing
-    )
+    shown.to_csv(path, index=False, lineterminator="\n", encoding="utf-8", compression=packing)
 
 
 def json_text(values: Mapping[str, Any]) -> str:
@@ -161,7 +159,9 @@ def _read_meta(folder: Path) -> dict[str, Any]:
         raise _refused(folder, MARKER, f"not JSON: {error}") from None
     if not isinstance(meta, dict) or meta.get("format") != FORMAT:
         found = meta.get("format") if isinstance(meta, dict) else None
-        raise _refused(folder, MARKER, f"format is {found!r}, this program reads {FORMAT}", "format")
+        raise _refused(
+            folder, MARKER, f"format is {found!r}, this program reads {FORMAT}", "format"
+        )
     missing = [key for key in META_KEYS if key not in meta]
     if missing:
         raise _refused(folder, MARKER, "keys are missing", ", ".join(missing))
@@ -234,7 +234,7 @@ def _read_table(folder: Path, name: str, dimension: int) -> pd.DataFrame:
 
 def _load(path: Path) -> pd.DataFrame:
     if path.suffix == ".parquet":
-        return pq.read_table(path).to_pandas()
+        return pd.DataFrame(pq.read_table(path).to_pandas())
     # Text first: a landmark may be called NA or 017, and only an empty cell means unknown.
     return pd.read_csv(path, dtype="str", keep_default_na=False, na_values=[""])
 

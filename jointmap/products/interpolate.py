@@ -141,7 +141,7 @@ def _within(t_s: Floats, share: Floats, outages: Floats) -> Bools:
         return np.zeros(len(t_s), dtype=bool)
     after = np.searchsorted(outages[:, 0], t_s, side="right") - 1
     inside = (after >= 0) & (t_s < outages[np.maximum(after, 0), 1])
-    return inside & (share > 0.0)
+    return np.asarray(inside & (share > 0.0))
 
 
 def _reasons(

@@ -83,7 +83,7 @@ def _inputs(reference: Reference, width: int) -> list[str]:
 
     def of(robot: str, kind: str) -> str:
         known = kind in kinds and robot in kinds.index
-        return f"{int(kinds.loc[robot, kind]):,}" if known else "0"
+        return f"{kinds.loc[robot, kind]:,}" if known else "0"
 
     rows = [
         [

@@ -34,15 +34,18 @@ def noise_section(reference: Reference, width: int) -> list[str]:
 
 def _noise_table(told: pd.DataFrame) -> list[str]:
     # Terms without a given value come last: there is nothing that they disagree with.
-    gap = np.log(told["estimated"] / told["given"]).abs().fillna(-1.0)
-    shown = told.loc[gap.sort_values(ascending=False, kind="stable").index].head(MOST_TERMS)
+    ratio = (told["estimated"] / told["given"]).to_numpy(dtype=np.float64)
+    gap = np.nan_to_num(np.abs(np.log(ratio)), nan=-1.0)
+    shown = told.iloc[np.argsort(-gap, kind="stable")[:MOST_TERMS]]
     rows = [
         [
-            " ".join(str(part) for part in (r.robot, r.sensor, r.component) if isinstance(part, str)),
+            " ".join(
+                str(part) for part in (r.robot, r.sensor, r.component) if isinstance(part, str)
+            ),
             str(r.term),
-            number(float(r.given)),  # type: ignore[arg-type]
-            number(float(r.estimated)),  # type: ignore[arg-type]
-            number(float(r.sigma)),  # type: ignore[arg-type]
+            number(float(r.given)),
+            number(float(r.estimated)),
+            number(float(r.sigma)),
         ]
         for r in shown.itertuples()
     ]

@@ -9,7 +9,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from jointmap import frames
-from jointmap.graph.bridge import bridge
+from jointmap.graph.bridge import SolvedKeyframes, prepare_bridge
 from jointmap.graph.clock import SurveyClock, fixed_values
 from jointmap.graph.motion import prepare_motion
 from jointmap.graph.problem import ODOMETRY_TERMS
@@ -27,7 +27,9 @@ Floats = NDArray[np.float64]
 OUTAGE_S = 0.5
 
 
-def trajectories(outcome: Outcome, expressed: Expressed, trust: Trust) -> dict[str, Trajectory]:
+def trajectories(
+    outcome: Outcome, expressed: Expressed, trust: Trust, max_gap_s: float | None
+) -> dict[str, Trajectory]:
     """One trajectory per robot, one row per odometry row."""
     survey, problem = outcome.survey, outcome.problem
     clock = SurveyClock(survey)
@@ -44,27 +46,29 @@ def trajectories(outcome: Outcome, expressed: Expressed, trust: Trust) -> dict[s
         )
         # Rows are stamped by the robot; the pose is wanted at that stamp, not at stamp + lag.
         rows_s = clock.survey_time(name, motion.odometry.t_s)
-        rows_s = np.clip(rows_s, stamps[0], stamps[-1])
-        made = bridge(
-            motion.odometry,
-            motion.t_rows,
-            rows_s,
+        solved = SolvedKeyframes(
             stamps,
             expressed.state.poses[lo:hi],
             expressed.pose_cov[lo:hi],
             expressed.next_cov[lo : hi - 1],
+        )
+        made = prepare_bridge(
+            motion.odometry,
+            motion.t_rows,
+            solved,
             theta,
             problem.dimension,
             translation_scale=motion.translation_scale,
             rotation_scale=motion.turn_scale,
-            max_gap_s=None,
-        )
+            max_gap_s=max_gap_s,
+            cuts=motion.splits,
+        ).at(rows_s)
         at = np.clip(np.searchsorted(stamps, rows_s, side="right") - 1, 0, hi - lo - 1)
         exact = np.isin(rows_s, stamps)
         codes = np.where(exact, trust.keyframe[lo:hi][at], trust.interval[lo:hi][at])
         parts = outcome.quality.gauge.component[lo:hi][at]
         out[name] = Trajectory(
-            t_s=clock.survey_time(name, motion.odometry.t_s),
+            t_s=rows_s,
             pose=group.to_rows(made.poses),
             cov=group.covariance_to_table(made.poses, made.covariance),
             keyframe=exact,

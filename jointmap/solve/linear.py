@@ -8,12 +8,14 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from dataclasses import dataclass, field
+from typing import Protocol
 
 import gtsam
 import numpy as np
 from numpy.typing import NDArray
 
 from jointmap.errors import IndeterminateError
+from jointmap.solve.layout import Layout
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -31,6 +33,14 @@ class Rows:
     keys: list[Ints]
     jacobians: list[Floats]
     rhs: Floats
+
+
+class HasLayout(Protocol):
+    """A system with numbered variables."""
+
+    @property
+    def layout(self) -> Layout:
+        """Numbering of its variables."""
 
 
 @dataclass
@@ -63,6 +73,12 @@ class LinearGraph:
         for key, d in enumerate(dims.tolist()):
             add(make(key, np.diag(strength[start : start + d]), np.zeros(d), _UNIT[d]))
             start += d
+
+
+def system_order(system: HasLayout, graph: LinearGraph) -> gtsam.Ordering:
+    """Ordering for a system: its calibration vectors last."""
+    keys = system.layout.calibration_key
+    return order(graph, keys[keys >= 0])
 
 
 def order(graph: LinearGraph, last: Ints) -> gtsam.Ordering:

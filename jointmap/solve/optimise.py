@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap.graph.problem import State
-from jointmap.solve.linear import LinearGraph, eliminate, order, step
+from jointmap.solve.linear import LinearGraph, eliminate, step, system_order
 from jointmap.solve.system import System, cost, linearise_system, retract
 
 Floats = NDArray[np.float64]
@@ -72,7 +72,7 @@ def optimise(
         now = lin.cost
         first = now if iteration == 1 else first
         if ordering is None:
-            ordering = order(lin.graph, system.layout.calibration_key[system.layout.calibration_key >= 0])
+            ordering = system_order(system, lin.graph)
         moved, new, damping, size = _descend(system, state, lin.graph, now, ordering, damping, settings)
         if report is not None:
             report(f"iteration {iteration}: objective {min(new, now):.6g}")

@@ -34,7 +34,7 @@ Bools = NDArray[np.bool_]
 class Expressed:
     """State and covariances in the frame and datum asked for.
 
-    ``state`` moved; ``pose_cov`` (K, dof, dof) body tangents; ``next_cov`` (K, dof, dof) cross
+    ``state`` moved by ``shift`` (C, *shape) of each component; ``pose_cov`` (K, dof, dof) body tangents; ``next_cov`` (K, dof, dof) cross
     covariance of each keyframe with the next one of its robot (zero at the last);
     ``landmark_cov`` (L, d, d) with d = dof for oriented ones' own rows, NaN where absent;
     ``carries`` (L,) landmarks that carry the datum; ``component`` (C,) anchors;
@@ -42,6 +42,7 @@ class Expressed:
     """
 
     state: State
+    shift: Floats
     pose_cov: Floats
     next_cov: Floats
     landmark_cov: Floats
@@ -71,14 +72,15 @@ def express(
     anchors = _anchors(problem, gauge.component, gauge.anchor, robot)
     held = gauge.free == 0
     to_site = held if kind == "control" else np.zeros(len(held), dtype=bool)
-    moved = _move(problem, system, state, gauge.component, anchors, to_site)
+    shift = _shift(problem, state, anchors, to_site)
+    moved = _move(problem, system, state, gauge.component, shift)
     layout, k = system.layout, system.layout.n_keyframes
     component = np.full(layout.n, -1, dtype=np.int64)
     component[: len(gauge.component)] = gauge.component
     weights, carries, words = _weights(
         problem, system, trust, component, anchors, to_site, kind
     )
-    null = _null(problem, system, moved)
+    null = _null(problem, system, state)
     site_rows = np.isin(np.repeat(component, layout.dims), np.flatnonzero(to_site))
     null[site_rows] = 0.0
     transform = datum_transform(quality.factor, component, null, weights)
@@ -89,8 +91,8 @@ def express(
     tied = tied[quality.inverse.shares_clique(tied, tied + 1)]
     tied = tied[component[tied] == component[tied + 1]]
     next_cov[tied] = transform.pairs(tied, tied + 1, quality.inverse.pairs(tied, tied + 1))
-    landmark_cov = _landmark_covariance(problem, system, quality, transform)
-    return Expressed(moved, pose_cov, next_cov, landmark_cov, carries, transform, words)
+    landmark_cov = _landmark_covariance(problem, system, quality, transform, component, shift)
+    return Expressed(moved, shift, pose_cov, next_cov, landmark_cov, carries, transform, words)
 
 
 def _anchors(problem: Problem, component: Ints, anchor: Ints, robot: str) -> Ints:
@@ -102,21 +104,22 @@ def _anchors(problem: Problem, component: Ints, anchor: Ints, robot: str) -> Int
     return out
 
 
-def _move(
-    problem: Problem,
-    system: System,
-    state: State,
-    component: Ints,
-    anchors: Ints,
-    to_site: Bools,
-) -> State:
+def _shift(problem: Problem, state: State, anchors: Ints, to_site: Bools) -> Floats:
+    """Transform (C, *shape) of every component from the solver's frame to the result's."""
     group = frames.group(problem.dimension)
-    k = system.layout.n_keyframes
     origin = state.poses[anchors]
     if problem.dimension == 3 and problem.gravity_aligned:
         origin = upright(origin)
     shift = group.inverse(origin)
     shift[to_site] = group.identity(1)[0]
+    return np.asarray(shift)
+
+
+def _move(
+    problem: Problem, system: System, state: State, component: Ints, shift: Floats
+) -> State:
+    group = frames.group(problem.dimension)
+    k = system.layout.n_keyframes
     poses = group.compose(shift[component[:k]], state.poses[:k])
     landmarks = state.landmarks.copy()
     index = system.layout.landmark_of_key
@@ -207,7 +210,12 @@ def _weights(
 
 
 def _landmark_covariance(
-    problem: Problem, system: System, quality: Quality, transform: DatumTransform
+    problem: Problem,
+    system: System,
+    quality: Quality,
+    transform: DatumTransform,
+    component: Ints,
+    shift: Floats,
 ) -> Floats:
     layout, k = system.layout, system.layout.n_keyframes
     index = layout.landmark_of_key
@@ -219,5 +227,10 @@ def _landmark_covariance(
             continue
         keys = k + rows
         d = dof if poses else problem.dimension
-        out[index[rows], :d, :d] = transform.diagonal(keys, quality.inverse.diagonal(keys))
+        blocks = transform.diagonal(keys, quality.inverse.diagonal(keys))
+        if not poses:
+            # Points have no frame of their own: their covariance turns with the map.
+            turn = frames.group(problem.dimension).rotation(shift[component[keys]])
+            blocks = turn @ blocks @ np.swapaxes(turn, 1, 2)
+        out[index[rows], :d, :d] = blocks
     return out
