@@ -193,7 +193,7 @@ def _settle(target: Path) -> str | None:
 
 
 def _discard(target: Path, folder: Path) -> None:
-    """Remove a sibling; a name of its own keeps a half removed folder from being taken for whole."""
+    """Remove a sibling under a name of its own: half removed, it must not pass for whole."""
     gone = _sibling(target, "gone")
     if gone.exists():
         shutil.rmtree(gone)

@@ -237,9 +237,7 @@ def _settings(args: argparse.Namespace) -> Settings:
     kernel: Kernel = args.kernel
     datum: DatumKind | None = args.datum
     noise: NoiseMode = args.noise
-    return Settings(
-        kernel=kernel, datum=datum, datum_robot=args.robot, noise=noise, seed=args.seed
-    )
+    return Settings(kernel=kernel, datum=datum, datum_robot=args.robot, noise=noise, seed=args.seed)
 
 
 def _show(reference: Reference, args: argparse.Namespace) -> None:

@@ -78,12 +78,8 @@ def _head(reference: Reference) -> list[str]:
 
 
 def _inputs(reference: Reference, width: int) -> list[str]:
-    kinds = pd.crosstab(reference.measurements["robot"], reference.measurements["kind"])
+    counts = reference.measurements.groupby(["robot", "kind"]).size().to_dict()
     paths = reference.robots.set_index("robot")["path_m"]
-
-    def of(robot: str, kind: str) -> str:
-        known = kind in kinds and robot in kinds.index
-        return f"{kinds.loc[robot, kind]:,}" if known else "0"
 
     rows = [
         [
@@ -91,7 +87,7 @@ def _inputs(reference: Reference, width: int) -> list[str]:
             f"{len(path):,}",
             clock(float(path.t_s[-1] - path.t_s[0]) if len(path) else 0.0),
             metres(float(paths.get(robot, np.nan))),
-            *(of(robot, kind) for kind in ("sighting", "encounter", "fix")),
+            *(f"{counts.get((robot, kind), 0):,}" for kind in ("sighting", "encounter", "fix")),
         ]
         for robot, path in reference.trajectories.items()
     ]
@@ -210,8 +206,7 @@ def _suspects(reference: Reference, width: int) -> list[str]:
     more = f" (first {len(shown)}; all in suspects.csv)" if len(suspects) > len(shown) else ""
     lines = [f"Suspects, worst first{more}; paste the lines into edits.toml to mend:"]
     for rank, row in enumerate(shown.itertuples(), 1):
-        statistic = float(row.statistic)  # type: ignore[arg-type]
-        what = f"{row.kind}: {row.reason} (statistic {number(statistic)})"
+        what = f"{row.kind}: {row.reason} (statistic {number(row.statistic)})"
         lines += wrap(what, width, f"{rank}. ")
         if isinstance(row.edit, str):
             lines += [f"     {line}" for line in row.edit.splitlines()]

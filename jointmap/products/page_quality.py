@@ -35,7 +35,8 @@ def noise_section(reference: Reference, width: int) -> list[str]:
 def _noise_table(told: pd.DataFrame) -> list[str]:
     # Terms without a given value come last: there is nothing that they disagree with.
     ratio = (told["estimated"] / told["given"]).to_numpy(dtype=np.float64)
-    gap = np.nan_to_num(np.abs(np.log(ratio)), nan=-1.0)
+    with np.errstate(divide="ignore", invalid="ignore"):  # a sigma of zero disagrees infinitely
+        gap = np.nan_to_num(np.abs(np.log(ratio)), nan=-1.0)
     shown = told.iloc[np.argsort(-gap, kind="stable")[:MOST_TERMS]]
     rows = [
         [
@@ -43,9 +44,9 @@ def _noise_table(told: pd.DataFrame) -> list[str]:
                 str(part) for part in (r.robot, r.sensor, r.component) if isinstance(part, str)
             ),
             str(r.term),
-            number(float(r.given)),
-            number(float(r.estimated)),
-            number(float(r.sigma)),
+            number(r.given),
+            number(r.estimated),
+            number(r.sigma),
         ]
         for r in shown.itertuples()
     ]
@@ -59,7 +60,7 @@ def _calibration_lines(reference: Reference, width: int) -> list[str]:
     lines = []
     for r in found.itertuples():
         whose = f"{r.robot} {r.sensor}" if isinstance(r.sensor, str) else str(r.robot)
-        value, sigma = number(float(r.value)), number(float(r.sigma))  # type: ignore[arg-type]
+        value, sigma = number(r.value), number(r.sigma)
         lines += wrap(f"Calibrated: {whose} {r.parameter} = {value} +- {sigma}", width)
     return lines
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import textwrap
 from collections.abc import Sequence
+from typing import Any
 
 MIN_WIDTH = 40
 
@@ -71,9 +72,9 @@ def percent(share: float) -> str:
     return f"{100 * share:.0f} %"
 
 
-def number(value: float) -> str:
-    """Up to three significant digits; ``-`` when not known."""
-    return f"{value:.3g}" if math.isfinite(value) else "-"
+def number(value: Any) -> str:
+    """A cell of a table with up to three significant digits; ``-`` when not known."""
+    return f"{float(value):.3g}" if math.isfinite(value) else "-"
 
 
 def clock(seconds: float) -> str:

@@ -1,4 +1,4 @@
-"""A small made-up reference of two robots in the slate quarry, for tests of products and commands."""
+"""A small made-up reference of two robots in the slate quarry, for products and commands."""
 
 from __future__ import annotations
 

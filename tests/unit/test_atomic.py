@@ -203,8 +203,9 @@ def test_other_data_is_never_replaced(tmp_path: Path) -> None:
 def test_a_result_that_exists_is_kept_without_replace(tmp_path: Path) -> None:
     target = tmp_path / "result"
     old_result(target, "folder")
-    with pytest.raises(OutputExistsError, match="exists already"), new_folder(
-        target, marker="mark.txt"
+    with (
+        pytest.raises(OutputExistsError, match="exists already"),
+        new_folder(target, marker="mark.txt"),
     ):
         pytest.fail("the result was open for writing")
     file = tmp_path / "poses.csv"
@@ -220,9 +221,10 @@ def test_a_result_that_exists_is_kept_without_replace(tmp_path: Path) -> None:
 def test_an_exception_in_the_block_leaves_the_old(tmp_path: Path) -> None:
     target = tmp_path / "result"
     old_result(target, "folder")
-    with pytest.raises(ZeroDivisionError), new_folder(
-        target, replace=True, marker="mark.txt"
-    ) as folder:
+    with (
+        pytest.raises(ZeroDivisionError),
+        new_folder(target, replace=True, marker="mark.txt") as folder,
+    ):
         (folder / "mark.txt").write_text("half")
         raise ZeroDivisionError
     assert content(target) == "old"

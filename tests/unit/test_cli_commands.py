@@ -7,7 +7,6 @@ import os
 import re
 import shutil
 import sys
-from collections.abc import Iterator
 from pathlib import Path
 from types import ModuleType
 from typing import Any
@@ -49,12 +48,12 @@ class Fuser:
 
 
 @pytest.fixture
-def fuser(monkeypatch: pytest.MonkeyPatch) -> Iterator[Fuser]:
+def fuser(monkeypatch: pytest.MonkeyPatch) -> Fuser:
     made = Fuser()
     module = ModuleType("jointmap.fuse")
     module.fuse = made  # type: ignore[attr-defined]
     monkeypatch.setitem(sys.modules, "jointmap.fuse", module)
-    yield made
+    return made
 
 
 Captured = pytest.CaptureFixture[str]
@@ -123,7 +122,8 @@ def test_fuse_writes_and_prints_the_page(
 
 
 def test_fuse_hands_its_options_on(survey: Path, tmp_path: Path, fuser: Fuser) -> None:
-    words = "--datum robot --robot otter --kernel tukey --noise given --seed 9 --quiet".split()
+    words = ["--datum", "robot", "--robot", "otter", "--kernel", "tukey"]
+    words += ["--noise", "given", "--seed", "9", "--quiet"]
     assert main(["fuse", str(survey), "--out", str(tmp_path / "ref"), *words]) == 0
     assert fuser.settings == Settings(
         datum="robot", datum_robot="otter", kernel="tukey", noise="given", seed=9
@@ -166,9 +166,7 @@ def test_an_earlier_reference_is_refused_before_the_work(
     assert read_reference(out).meta["seed"] == 2
 
 
-def test_the_survey_itself_is_never_replaced(
-    survey: Path, fuser: Fuser, capsys: Captured
-) -> None:
+def test_the_survey_itself_is_never_replaced(survey: Path, fuser: Fuser, capsys: Captured) -> None:
     assert main(["fuse", str(survey), "--out", str(survey), "--replace"]) == 2
     assert "no reference.json" in capsys.readouterr().err
     assert (survey / "survey.toml").is_file()

@@ -10,12 +10,12 @@ import numpy as np
 import pandas as pd
 import pyarrow.parquet as pq
 import pytest
+from synthetic_reference import meta, reference
 
 from jointmap.errors import LogFormatError, OutputExistsError, SurveyError
 from jointmap.products.columns import META_KEYS, TABLES, complete
 from jointmap.products.files import read_reference, write_reference
 from jointmap.products.reference import Reference
-from synthetic_reference import meta, reference
 
 
 @pytest.mark.parametrize("dimension", [2, 3])
@@ -55,10 +55,7 @@ def test_the_folder_holds_the_files_and_columns_that_are_promised(tmp_path: Path
         "trajectory/otter.parquet",
     ]
     # The words of the published table of outputs, written out here on purpose.
-    assert pq.read_schema(folder / "trajectory/heron.parquet").names == (
-        "t_s x_m y_m yaw_rad cov_x_x cov_x_y cov_x_yaw cov_y_y cov_y_yaw cov_yaw_yaw "
-        "keyframe component trust"
-    ).split(" ")
+    assert pq.read_schema(folder / "trajectory/heron.parquet").names == ["t_s", "x_m", "y_m", "yaw_rad", "cov_x_x", "cov_x_y", "cov_x_yaw", "cov_y_y", "cov_y_yaw", "cov_yaw_yaw", "keyframe", "component", "trust"]
     header = (folder / "associations.csv").read_text().splitlines()[0]
     assert header == "robot,label,landmark,n_sightings,verdict,reason,statistic,alternative"
     header = (folder / "noise.csv").read_text().splitlines()[0]
