@@ -89,10 +89,8 @@ def drop_unseen(
     if lost.size == 0:
         return associations
     message = [f"{pairs[i][0]} never sighted {pairs[i][1]!r}" for i in lost.tolist()]
-    files = [source.files[source.file[i]] for i in lost.tolist()]
-    problems.rows(
-        files, source.row[lost], "label", message, "the association is ignored", mended=True
-    )
+    mend = "the association is ignored"
+    problems.rows(source.files[0], source.row[lost], "label", message, mend, mended=True)
     return take(associations, keep)
 
 

@@ -96,10 +96,11 @@ def _check_control(survey: Survey, seen: Mapping[str, tuple[int, int]], problems
     if control is None:
         return
     unseen = [i for i, name in enumerate(control.landmarks) if name not in seen]
-    files = [control.source.files[control.source.file[i]] for i in unseen]
     message = [f"{control.landmarks[i]!r} was never sighted" for i in unseen]
     rows = control.source.row[unseen]
-    problems.rows(files, rows, "landmark", message, "it says nothing", mended=True)
+    problems.rows(
+        control.source.files[0], rows, "landmark", message, "it says nothing", mended=True
+    )
 
 
 def _check_determined(

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from jointmap import schema
-from jointmap.ingest.problems import Problems
+from jointmap.ingest.problems import LISTED_ROWS, Problems
 from jointmap.ingest.survey import ControlPoints, Floats, Ints
 from jointmap.ingest.table import Table
 from jointmap.ingest.values import (
@@ -55,13 +55,12 @@ def _compare(table: Table, code: Ints, position: Floats, sigma: Floats, problems
         apart = np.abs(position - position[start]) / np.hypot(sigma, sigma[start])
         contradicts = repeats & (apart > AGREEMENT).any(axis=1)
     index = np.flatnonzero(contradicts)
-    names = table.take(index[:21]).texts["landmark"].text()
-    rows = table.row[start[index[:21]]]
+    names = table.take(index[:LISTED_ROWS]).texts["landmark"].text()
+    rows = table.row[start[index[:LISTED_ROWS]]]
     message = [
         f"{n!r} contradicts row {r} by {apart[i].max():.3g} sigmas"
         for n, r, i in zip(names, rows, index, strict=False)
     ]
-    message += [message[-1]] * (len(index) - len(message)) if message else []
     table.complain(problems, index, "landmark", message, "keep the right one, or mend the sigmas")
     agree = np.flatnonzero(repeats & ~contradicts)
     mend = "the rows are averaged by weight"

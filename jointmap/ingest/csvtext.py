@@ -14,7 +14,7 @@ import pyarrow.compute as pc
 import pyarrow.csv as pacsv
 from numpy.typing import NDArray
 
-from jointmap.ingest.problems import Problems
+from jointmap.ingest.problems import LISTED_ROWS, Problems
 from jointmap.ingest.survey import Ints
 
 NUMBER = r"(?i)^[+-]?((\d+\.?\d*|\.\d+)(e[+-]?\d+)?|inf|infinity)$"
@@ -43,7 +43,7 @@ def header_of(data: memoryview) -> tuple[list[str], int]:
     end = head.find(b"\n")
     line = head if end < 0 else head[:end]
     text = line.decode("utf-8-sig", errors="replace").rstrip("\r")
-    names = next(csv.reader([text]), [])
+    names = next(csv.reader([text], skipinitialspace=True), [])
     return [n.strip() for n in names], len(head) if end < 0 else end + 1
 
 
@@ -159,7 +159,7 @@ def _report_rows(
     rows = [int(lines[min(b[0] - 1, len(lines) - 1)]) for b in filled]
     message = [f"{b[1]} cells where the header has {len(header)}" for b in filled]
     mend = "give every row one cell per column of the header"
-    problems.rows([path] * len(rows), rows, None, message, mend)
+    problems.rows(path, rows, None, message, mend)
 
 
 def _convert(
@@ -172,11 +172,10 @@ def _convert(
     bad = np.flatnonzero(pc.invert(pc.or_(good, empty)).to_numpy())
     if bad.size:
         wanted = "a number" if kind == "float64" else "a whole number of nanoseconds"
-        listed = cells.take(bad[:21]).to_pylist()
+        listed = cells.take(bad[:LISTED_ROWS]).to_pylist()
         message = [f"{_shown(c)} is not {wanted}" for c in listed]
-        message += [message[-1]] * (len(bad) - len(message))
         mend = "write a number with a decimal point, or leave the cell empty"
-        problems.rows([path] * len(bad), rows[bad], name, message, mend)
+        problems.rows(path, rows[bad], name, message, mend)
     plain = pc.replace_substring_regex(cells, r"^\+", "")
     return pc.if_else(good, plain, pa.scalar(None, pa.string())).cast(_ARROW[kind])
 

@@ -114,7 +114,7 @@ def place_fixes(
     ellipsoid = _ellipsoid(config, problems)
     beside = has_control or any(f.form == "local" and len(f.t_s) for f in raw.values())
     origin = _origin(geographic, config, beside, problems)
-    if ellipsoid is None or origin is None:
+    if ellipsoid is None or origin is None or problems.refused:
         return {}, None
     placed = {}
     for name, fixes in raw.items():

@@ -174,7 +174,7 @@ def _read_text(path: Path, columns: int, problems: Problems) -> Floats:
     if bad.size and not problems.refused:
         mend = "mend or drop the line"
         rows = parsed.row[bad]
-        problems.rows([path.name] * len(rows), rows, None, "a number is missing", mend)
+        problems.rows(path.name, rows, None, "a number is missing", mend)
     return table
 
 

@@ -22,6 +22,7 @@ class Problems:
 
     def __init__(self) -> None:
         self._found: list[LogProblem] = []
+        self._cells: dict[tuple[str, str], set[int]] = {}
 
     def add(
         self,
@@ -38,7 +39,7 @@ class Problems:
 
     def rows(
         self,
-        paths: Sequence[str],
+        path: str,
         rows: Sequence[int] | NDArray[np.int64],
         column: str | None,
         message: str | Sequence[str],
@@ -46,18 +47,23 @@ class Problems:
         *,
         mended: bool = False,
     ) -> None:
-        """Record the same problem of many rows: the first ones listed, the rest counted.
+        """Record the same problem of many rows of a file: the first listed, the rest counted.
 
-        ``paths`` and ``rows`` go together; ``message`` is one text, or one per row.
+        ``message`` is one text, or one per listed row. A cell that was refused already is not
+        refused again: a text in a number is not also an empty number.
         """
-        n = len(rows)
-        for i in range(min(n, LISTED_ROWS)):
-            one = message if isinstance(message, str) else message[i]
-            self.add(paths[i], one, mend, row=int(rows[i]), column=column, mended=mended)
-        if n > LISTED_ROWS:
+        index = np.arange(len(rows))
+        if column is not None and not mended:
+            cells = self._cells.setdefault((path, column), set())
+            index = np.flatnonzero([int(r) not in cells for r in rows])
+            cells.update(int(r) for r in rows)
+        for i in index[:LISTED_ROWS].tolist():
+            one = message if isinstance(message, str) else message[min(i, len(message) - 1)]
+            self.add(path, one, mend, row=int(rows[i]), column=column, mended=mended)
+        if len(index) > LISTED_ROWS:
             kind = message if isinstance(message, str) else message[0]
-            text = f"{n - LISTED_ROWS} more rows of the same kind ({kind})"
-            self.add(paths[0], text, mend, column=column, mended=mended)
+            text = f"{len(index) - LISTED_ROWS} more rows of the same kind ({kind})"
+            self.add(path, text, mend, column=column, mended=mended)
 
     def extend(self, problems: Iterable[LogProblem]) -> None:
         """Take over problems found elsewhere."""

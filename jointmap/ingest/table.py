@@ -8,7 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from jointmap.ingest.problems import Problems
+from jointmap.ingest.problems import LISTED_ROWS, Problems
 from jointmap.ingest.survey import Floats, Ints, Provenance
 
 
@@ -91,7 +91,7 @@ class Table:
     ) -> bool:
         """Record a problem of the rows of a mask or index; returns whether there are any.
 
-        A sequence of messages goes with the selected rows, one each.
+        A sequence of messages goes with the first selected rows, one each.
         """
         index = np.flatnonzero(where) if where.dtype == np.bool_ else where
         if column in self.from_ns:
@@ -100,9 +100,11 @@ class Table:
             chosen = np.flatnonzero(self.file[index] == k)
             if chosen.size == 0:
                 continue
-            text = message if isinstance(message, str) else [message[i] for i in chosen[:21]]
+            text: str | list[str] = message if isinstance(message, str) else list(message)
+            if isinstance(text, list):
+                text = [text[min(i, len(text) - 1)] for i in chosen[:LISTED_ROWS].tolist()]
             rows = self.row[index[chosen]]
-            problems.rows([name] * min(len(rows), 21), rows, column, text, mend, mended=mended)
+            problems.rows(name, rows, column, text, mend, mended=mended)
         return index.size > 0
 
 

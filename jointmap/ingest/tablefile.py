@@ -180,7 +180,7 @@ def _to_table(parsed: Parsed, name: str, problems: Problems) -> Table:
         problems.add(name, message, "the nanoseconds are used", column=column, mended=True)
     file = np.zeros(len(parsed.row), dtype=np.int64)
     table = Table((name,), file, parsed.row, numbers, texts, frozenset(from_ns))
-    _refuse_infinite(table, problems)
+    _refuse_infinite(table, numbers, problems)
     return table
 
 
@@ -213,12 +213,14 @@ def _names_of(values: pa.ChunkedArray) -> Names:
     return Names(to[codes], names)
 
 
-def _refuse_infinite(table: Table, problems: Problems) -> None:
-    for column, values in table.numbers.items():
+def _refuse_infinite(table: Table, numbers: dict[str, Floats], problems: Problems) -> None:
+    """Report infinite cells, and empty them for the checks that follow."""
+    for column, values in list(numbers.items()):
         # One pass without temporaries for the usual case: a finite sum has no infinite term.
-        if np.isfinite(values.sum()):
-            continue
+        with np.errstate(invalid="ignore"):  # infinities of both signs
+            if np.isfinite(values.sum()):
+                continue
         infinite = np.isinf(values)
-        table.complain(
-            problems, infinite, column, "the number is infinite", "leave the cell empty or mend it"
-        )
+        message, mend = "the number is infinite", "leave the cell empty or mend it"
+        if table.complain(problems, infinite, column, message, mend):
+            numbers[column] = np.where(infinite, np.nan, values)

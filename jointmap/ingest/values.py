@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap import schema
-from jointmap.ingest.problems import Problems, did_you_mean
+from jointmap.ingest.problems import LISTED_ROWS, Problems, did_you_mean
 from jointmap.ingest.survey import Floats, Ints
 from jointmap.ingest.table import Table
 
@@ -148,8 +148,7 @@ def normalise(table: Table, quaternion: Floats, problems: Problems) -> Floats:
     with np.errstate(invalid="ignore"):
         off = (np.abs(norm - 1.0) > QUIET_NORM) & ~wrong
     if wrong.any():
-        message = [f"quaternion of length {v:.4g}" for v in norm[wrong][:21]]
-        message += [message[-1]] * (int(wrong.sum()) - len(message))
+        message = [f"quaternion of length {v:.4g}" for v in norm[wrong][:LISTED_ROWS]]
         table.complain(problems, wrong, "qx", message, "write a unit quaternion qx qy qz qw")
     if off.any():
         notice = "quaternion of a length other than one"
