@@ -90,7 +90,8 @@ def recognise_places(
     robot, log_s, t_s = _moments(motions, clocks, settings, rng)
     pose = np.concatenate([motions[n].at(t_s[robot == k]) for k, n in enumerate(names)])
     a, b = _same_place(space.translation(pose), space.rotation(pose), robot, t_s)
-    chosen = np.sort(rng.permutation(len(a))[: settings.closures])
+    chosen = rng.permutation(len(a))[: settings.closures]
+    chosen = chosen[np.argsort(log_s[a[chosen]], kind="stable")]
     a, b = a[chosen], b[chosen]
     wrong = np.zeros(len(a), dtype=bool)
     wrong[rng.permutation(len(a))[: round(settings.wrong_closures * len(a))]] = True

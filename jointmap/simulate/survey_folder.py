@@ -42,6 +42,8 @@ def write_survey(simulation: Simulation, folder: Path) -> None:
 
 def _associated(simulation: Simulation) -> bool:
     settings = simulation.settings
+    if not simulation.associations.listed.any():
+        return False
     return own_labels(settings) or settings.wrong_associations > 0 or settings.unlisted > 0
 
 
