@@ -21,6 +21,7 @@ from jointmap.simulate.clocks import LogClock
 from jointmap.simulate.motion import Motion, move
 from jointmap.simulate.observe import (
     Observed,
+    Scene,
     merge,
     report,
     see_plates,
@@ -92,7 +93,9 @@ def build(world: str, settings: SimulationSettings, seed: int) -> Simulation:
     odometry = {
         r.name: log_odometry(motions[r.name], r, clocks[r.name], settings, streams) for r in team
     }
-    sightings, encounters = _look(plan, plates, team, motions, clocks, settings, streams)
+    sightings, encounters = _look(
+        Scene(plates, plan.walls(), settings, streams), team, motions, clocks
+    )
     seen = {name: _first_met(o.target) for name, o in sightings.items()}
     return Simulation(
         world,
@@ -118,38 +121,28 @@ def build(world: str, settings: SimulationSettings, seed: int) -> Simulation:
 
 
 def _look(
-    plan: Plan,
-    plates: Plates,
+    scene: Scene,
     team: tuple[RobotSpec, ...],
     motions: Mapping[str, Motion],
     clocks: Mapping[str, LogClock],
-    settings: SimulationSettings,
-    streams: Streams,
 ) -> tuple[dict[str, Observed], dict[str, Observed]]:
     """Sightings and encounters of every robot."""
-    walls = plan.walls()
     sightings: dict[str, Observed] = {}
     encounters: dict[str, Observed] = {}
     for robot in team:
         others = {k: (motions[o.name], o) for k, o in enumerate(team) if o.name != robot.name}
-        plate_parts, robot_parts = [], []
+        plates, robots = [], []
         for sensor in robot.sensors:
-            frames = sensor_frames(
-                motions[robot.name], robot, sensor, clocks[robot.name], settings, streams
-            )
-            rows, target = see_plates(frames, plates, walls, robot, sensor, settings, streams)
             name = (robot.name, sensor.name)
-            plate_parts.append(
-                report(frames, rows, target, sensor, settings, streams, "sighting", *name)
-            )
-            if settings.encounters and others:
-                rows, target = see_robots(frames, others, walls, robot, sensor, settings, streams)
-                robot_parts.append(
-                    report(frames, rows, target, sensor, settings, streams, "encounter", *name)
-                )
-        sightings[robot.name] = merge(plate_parts)
-        if robot_parts:
-            encounters[robot.name] = merge(robot_parts)
+            frames = sensor_frames(motions[robot.name], robot, sensor, clocks[robot.name], scene)
+            seen = see_plates(frames, robot, sensor, scene)
+            plates.append(report(frames, seen, sensor, scene, "sighting", *name))
+            if scene.settings.encounters and others:
+                seen = see_robots(frames, others, robot, sensor, scene)
+                robots.append(report(frames, seen, sensor, scene, "encounter", *name))
+        sightings[robot.name] = merge(plates)
+        if robots:
+            encounters[robot.name] = merge(robots)
     return sightings, encounters
 
 

@@ -51,6 +51,16 @@ class Observed:
 
 
 @dataclass(frozen=True)
+class Scene:
+    """What all robots share: plates, walls (k, 2, 2), settings and random streams."""
+
+    plates: Plates
+    walls: Floats
+    settings: SimulationSettings
+    streams: Streams
+
+
+@dataclass(frozen=True)
 class Frames:
     """Instants at which a sensor looks: stamps, survey times and world_T_sensor of each."""
 
@@ -74,15 +84,11 @@ class Target:
 
 
 def sensor_frames(
-    motion: Motion,
-    robot: RobotSpec,
-    sensor: SensorSpec,
-    clock: LogClock,
-    settings: SimulationSettings,
-    streams: Streams,
+    motion: Motion, robot: RobotSpec, sensor: SensorSpec, clock: LogClock, scene: Scene
 ) -> Frames:
     """Instants of one sensor, by its rate with jitter, exact to the rounding of the stamps."""
-    rng = streams.get("frames", robot.name, sensor.name)
+    settings = scene.settings
+    rng = scene.streams.get("frames", robot.name, sensor.name)
     first, last = motion.t_s[0] + 0.5, motion.t_s[-1] - 0.5
     if robot.name in settings.lost:
         last = min(last, settings.start_s + settings.duration_s / 2)
@@ -95,15 +101,10 @@ def sensor_frames(
 
 
 def see_plates(
-    frames: Frames,
-    plates: Plates,
-    walls: Floats,
-    robot: RobotSpec,
-    sensor: SensorSpec,
-    settings: SimulationSettings,
-    streams: Streams,
+    frames: Frames, robot: RobotSpec, sensor: SensorSpec, scene: Scene
 ) -> tuple[Ints, Target]:
     """Frame number and target of every plate that is seen and reported."""
+    plates, settings = scene.plates, scene.settings
     dim = plates.position.shape[1]
     eyes = group(dim).translation(frames.pose)
     i, j = pairs_in_reach(eyes[:, :2], plates.position[:, :2], settings.max_range_m)
@@ -113,8 +114,8 @@ def see_plates(
     seen &= angle <= MAX_INCIDENCE_RAD
     i, j, angle = i[seen], j[seen], angle[seen]
     reach = settings.max_range_m
-    keep = ~blocked(eyes[i, :2], plates.position[j, :2], walls, reach)
-    luck = streams.get("detect", robot.name, sensor.name).random(len(i))
+    keep = ~blocked(eyes[i, :2], plates.position[j, :2], scene.walls, reach)
+    luck = scene.streams.get("detect", robot.name, sensor.name).random(len(i))
     keep &= luck < settings.detection
     i, j, angle = i[keep], j[keep], angle[keep]
     oriented = plates.tag[j]
@@ -124,14 +125,13 @@ def see_plates(
 def see_robots(
     frames: Frames,
     others: Mapping[int, tuple[Motion, RobotSpec]],
-    walls: Floats,
     robot: RobotSpec,
     sensor: SensorSpec,
-    settings: SimulationSettings,
-    streams: Streams,
+    scene: Scene,
 ) -> tuple[Ints, Target]:
     """Frame number and target of every other robot's target point that is seen and reported."""
-    dim = 2 if frames.pose.ndim == 2 else 3
+    settings = scene.settings
+    dim = scene.plates.position.shape[1]
     space = group(dim)
     rows: list[Ints] = []
     numbers: list[Ints] = []
@@ -142,10 +142,10 @@ def see_robots(
         point = space.transform(motion.at(frames.t_s[i]), other.target_point)
         local = space.inverse_transform(frames.pose[i], point)
         seen = in_view(local, settings.field_of_view_rad, settings.max_range_m)
-        luck = streams.get("meet", robot.name, sensor.name, other.name).random(len(i))
+        luck = scene.streams.get("meet", robot.name, sensor.name, other.name).random(len(i))
         seen &= luck < settings.detection
         eye = space.translation(frames.pose[i[seen]])
-        free = ~blocked(eye[:, :2], point[seen][:, :2], walls, settings.max_range_m)
+        free = ~blocked(eye[:, :2], point[seen][:, :2], scene.walls, settings.max_range_m)
         rows.append(i[seen][free])
         numbers.append(np.full(int(free.sum()), index))
         points.append(point[seen][free])
@@ -168,22 +168,22 @@ def _facing(yaw: Floats, dim: int) -> Floats:
 
 def report(
     frames: Frames,
-    rows: Ints,
-    target: Target,
+    seen: tuple[Ints, Target],
     sensor: SensorSpec,
-    settings: SimulationSettings,
-    streams: Streams,
+    scene: Scene,
     *name: object,
 ) -> Observed:
     """Values with all errors, for one sensor and kind of target.
 
     Parameters
     ----------
-    rows : (n,) int
-        Frame of each observation.
+    seen : ((n,) int, Target)
+        Frame and target of each observation.
     *name : object
         Name of the streams: kind, robot, sensor.
     """
+    rows, target = seen
+    settings, streams = scene.settings, scene.streams
     order = np.lexsort((target.number, rows))
     rows = rows[order]
     target = Target(*(getattr(target, f)[order] for f in Target.__dataclass_fields__))
