@@ -171,7 +171,7 @@ def fit_chunk(
         hypotheses += [_descend(matches, s, predicted, prior, form) for s in starts]
     costs = [_cost(matches, h, predicted, prior) for h in hypotheses]
     best = hypotheses[int(np.argmin(costs))]
-    information, _ = _information(matches, best, predicted, prior, form)
+    information = _information(matches, best, predicted, prior, form)[0]
     variance = np.diag(masked_inverse(information, form)).copy()
     points, closures = _distances(matches, best)
     agreed = int((points <= chi2.ppf(0.997, lie.dim)).sum())
@@ -256,11 +256,11 @@ def _information(
     information: Floats = np.einsum("nji,njk,nkl->il", jacobian, weight, jacobian)
     gradient: Floats = np.einsum("nji,njk,nk->i", jacobian, weight, residual)
     if len(matches.proposed):
-        weight = np.linalg.inv(matches.proposed_covariance)
-        weight = weight / (1.0 + closures / (5.7 * lie.dof))[:, None, None]
+        share = 1.0 / (1.0 + closures / (5.7 * lie.dof))
+        trust = np.linalg.inv(matches.proposed_covariance) * share[:, None, None]
         tangent = lie.local(pose, matches.proposed)
-        information = np.asarray(information + weight.sum(axis=0))
-        gradient = np.asarray(gradient + np.einsum("nij,nj->i", weight, tangent))
+        information = np.asarray(information + trust.sum(axis=0))
+        gradient = np.asarray(gradient + np.einsum("nij,nj->i", trust, tangent))
     tangent = lie.local(pose, predicted)
     own: Floats = 1.0 / np.maximum(prior, 1e-12)
     own /= 1.0 + float(np.sum(tangent**2 * own)) / (5.7 * lie.dof)

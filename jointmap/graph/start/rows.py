@@ -82,7 +82,7 @@ def cauchy_weight(rows: SightingRows, residual: Floats) -> Floats:
 
 def sum_by_group(group: Ints, values: Floats, groups: int) -> Floats:
     """Sum values (n, ...) over groups: (groups, ...)."""
-    flat = values.reshape(len(values), -1)
+    flat = values.reshape(len(values), int(np.prod(values.shape[1:], dtype=np.int64)))
     total = np.stack(
         [np.bincount(group, weights=column, minlength=groups) for column in flat.T], axis=1
     )

@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 from jointmap import frames
 from jointmap.graph.start.chunks import Chunks
 from jointmap.graph.start.gather import Sighted
-from jointmap.graph.start.triangulate import triangulate
+from jointmap.graph.start.triangulate import Triangulation, triangulate
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -52,13 +52,10 @@ def _placed(
     return lie.compose(poses[chunk], local)
 
 
-def track_points(
-    sighted: Sighted, poses: Floats, tracks: int, dimension: int
-) -> tuple[Floats, Floats, Bools]:
-    """Triangulate every track (T) from all its sightings; position, covariance, determined."""
+def track_points(sighted: Sighted, poses: Floats, tracks: int, dimension: int) -> Triangulation:
+    """Triangulate every track (T) from all its sightings at keyframe poses (K, *shape)."""
     rows = sighted.rows(poses[sighted.keyframe], sighted.track, dimension)
-    found = triangulate(rows, tracks)
-    return found.position, found.covariance, found.determined
+    return triangulate(rows, tracks)
 
 
 def track_turns(sighted: Sighted, poses: Floats, tracks: int, dimension: int) -> Floats:
