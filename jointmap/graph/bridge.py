@@ -78,12 +78,17 @@ class _Walker:
 
 @dataclass(frozen=True)
 class Bridge:
-    """A robot's solved keyframes and odometry, ready to be asked at any stamp."""
+    """A robot's solved keyframes and odometry, ready to be asked at any stamp.
+
+    ``bounds`` (S+1,) seconds of the stretches, ``stated`` (S,) whether their rows' own noise is in
+    force, ``spans`` their rules, ``base`` (S, 7) the poses of these as rows.
+    """
 
     walker: _Walker
     bounds: Floats
     stated: Bools
     spans: Spans
+    base: Floats
 
     @property
     def dimension(self) -> int:
@@ -123,7 +128,7 @@ class Bridge:
             moments[asked],
             stated[asked] if len(stated) else stated,
             self.stated,
-            _seven(s.base, self.dimension),
+            self.base,
             s.root,
             s.sign,
             s.lean,
@@ -201,7 +206,8 @@ def prepare_bridge(
         stated = np.asarray(np.isfinite(m[:, 1]).all(axis=(1, 2)), dtype=bool)
     m = np.where(stated[:, None, None], m[:, 1], m[:, 0])
     spans = make_spans(keyframes, parts, from_seven(motion[1:], dimension), m, dimension)
-    return Bridge(walker, parts.bounds, stated, spans)
+    base = _seven(spans.base, dimension)
+    return Bridge(walker, parts.bounds, stated, spans, base)
 
 
 def bridge(

@@ -164,7 +164,8 @@ def cumulative(
         else:
             tangents = twist[:, [3, 4, 5, 0, 1, 2]]
         tangents = tangents * np.diff(edges)[:, None]
-    tangents *= scale
+    # the compiled loops want rows in sequence; a copy per query would cost the square of the length
+    tangents = np.ascontiguousarray(tangents * scale)
     return Cumulative(dimension, edges, tangents, rows, start, period)
 
 

@@ -108,7 +108,7 @@ def walk_increments(
     """:func:`jointmap.graph.walk.walk` with the arguments in order and C layout."""
     return walk(  # type: ignore[no-any-return]
         made.edges,
-        np.ascontiguousarray(made.tangents),
+        made.tangents,
         np.ascontiguousarray(stamps, dtype=np.float64),
         restart,
         gaps.speed2,

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import gtsam
 import numpy as np
 import pytest
@@ -171,6 +173,53 @@ def test_order_and_number_of_stamps_do_not_matter():
         alone = ready.at(stamps[k : k + 1])
         np.testing.assert_allclose(alone.poses[0], together.poses[k], rtol=0, atol=1e-13)
         np.testing.assert_allclose(alone.covariance[0], together.covariance[k], rtol=0, atol=1e-14)
+
+
+def test_long_logs_are_answered_in_parts_without_a_trace(monkeypatch):
+    odometry, t, few, _ = _setting(2, "twist", False, 1e-2)
+    ready = prepare_bridge(odometry, t, _solved(2, t, few), THETA, 2)
+    whole = ready.at(t)
+    monkeypatch.setattr("jointmap.graph.bridge._CHUNK", 7)
+    parts = ready.at(t)
+    np.testing.assert_allclose(parts.poses, whole.poses, rtol=0, atol=1e-14)
+    np.testing.assert_allclose(parts.covariance, whole.covariance, rtol=0, atol=1e-16)
+
+
+def test_a_row_without_its_own_noise_leaves_its_pair_to_the_terms():
+    odometry, t, few, _ = _setting(2, "pose", True, 1e-2)
+    solved = _solved(2, t, few)
+    stated = bridge(odometry, t, solved, THETA, 2)
+    modelled = bridge(replace(odometry, sigma=None), t, solved, THETA, 2)
+    sigma = np.array(odometry.sigma)
+    sigma[KEYS[0] + 5] = np.nan
+    mixed = bridge(replace(odometry, sigma=sigma), t, solved, THETA, 2)
+    first, second = slice(KEYS[0], KEYS[1]), slice(KEYS[1], KEYS[2])
+    np.testing.assert_array_equal(mixed.covariance[first], modelled.covariance[first])
+    np.testing.assert_array_equal(mixed.covariance[second], stated.covariance[second])
+    assert (stated.covariance[first][5, 2, 2]) != modelled.covariance[first][5, 2, 2]
+
+
+def test_a_gap_takes_the_correction_and_its_uncertainty():
+    """Ten seconds at 1 m/s with two seconds missing; the keyframes say 0.5 m less was driven."""
+    t = np.concatenate([np.arange(0.0, 4.0, 0.1), np.arange(6.0, 10.05, 0.1)])
+    none = Provenance(("odometry.csv",), np.zeros(len(t), int), np.arange(len(t)))
+    odometry = Odometry("twist", t, None, np.tile([1.0, 0.0, 0.0], (len(t), 1)), None, None, none)
+    small = 1e-6 * np.eye(3)
+    solved = SolvedKeyframes(
+        np.array([0.0, 10.0]),
+        np.array([[0.0, 0.0, 0.0], [9.5, 0.0, 0.0]]),
+        np.array([small, small]),
+        np.zeros((1, 3, 3)),
+    )
+    ready = prepare_bridge(odometry, t, solved, THETA, 2)
+    before, middle, after = ready.at([3.9, 4.95, 6.0]).poses[:, 0] - [3.9, 4.95, 6.0]
+    # variance along the way: 0.001 per second, and (2.1 m)^2 in the gap; a bridge has a quarter of
+    # it halfway
+    assert before == pytest.approx(0.0, abs=1e-3)
+    assert middle == pytest.approx(-0.25, abs=1e-3)
+    assert after == pytest.approx(-0.5, abs=1e-3)
+    variance = (2.1**2 + 0.001 * 10) / 4
+    assert ready.at([4.95]).covariance[0, 0, 0] == pytest.approx(variance, rel=1e-5)
 
 
 def test_a_cut_lets_both_sides_drift_away_from_their_keyframes():
