@@ -157,8 +157,8 @@ def _report_rows(
         return
     lines = content_lines(data)
     rows = [int(lines[min(b[0] - 1, len(lines) - 1)]) for b in filled]
-    message = [f"{b[1]} cells where the header has {len(header)}" for b in filled]
-    mend = "give every row one cell per column of the header"
+    message = [f"{b[1]} cells where there should be {len(header)}" for b in filled]
+    mend = "give every row one cell per column"
     problems.rows(path, rows, None, message, mend)
 
 

@@ -142,39 +142,42 @@ def _read_run(source: Path, problems: Problems) -> _Run:
     if not logs:
         problems.add(str(source), "no RobotN_Odometry.dat", "name the folder with the logs")
     landmarks = source / "Landmark_Groundtruth.dat"
-    truth = _read_text(landmarks, 5, problems) if landmarks.is_file() else None
+    truth = (
+        _read_text(landmarks, ("subject", "x", "y", "x sigma", "y sigma"), problems)
+        if landmarks.is_file()
+        else None
+    )
     subjects = _read_barcodes(source / "Barcodes.dat", problems)
     return _Run(source.resolve().name, subjects, logs, truth, tuple(notes))
 
 
 def _read_log(source: Path, n: int, kinds: set[str], problems: Problems) -> _Log:
-    def read(kind: str, columns: int) -> Floats | None:
+    def read(kind: str, columns: Sequence[str]) -> Floats | None:
         if kind not in kinds:
             return None
         return _read_text(source / f"Robot{n}_{kind}.dat", columns, problems)
 
-    odometry, measured = read("Odometry", 3), read("Measurement", 4)
+    measured = read("Measurement", ("time", "barcode", "range", "bearing"))
     return _Log(
-        odometry=np.empty((0, 3)) if odometry is None else odometry,
+        odometry=_read_text(
+            source / f"Robot{n}_Odometry.dat", ("time", "forward", "angular"), problems
+        ),
         measured=np.empty((0, 4)) if measured is None else measured,
-        truth=read("Groundtruth", 4),
+        truth=read("Groundtruth", ("time", "x", "y", "heading")),
     )
 
 
-def _read_text(path: Path, columns: int, problems: Problems) -> Floats:
+def _read_text(path: Path, names: Sequence[str], problems: Problems) -> Floats:
     """Numbers (n, columns) of a text file separated by blanks, comments skipped."""
-    names = [f"{i + 1}" for i in range(columns)]
     text = memoryview(blanks_to_commas(path.read_bytes()))
     if not bytes(text).strip():
-        return np.empty((0, columns))
+        return np.empty((0, len(names)))
     parsed = parse_csv(text, path.name, names, dict.fromkeys(names, "float64"), problems, skip=0)
     table = np.column_stack([parsed.columns[n].to_numpy() for n in names])
-    bad = np.flatnonzero(~np.isfinite(table).all(axis=1))
-    # A cell that is no number is missing here and was reported by the parser.
-    if bad.size and not problems.refused:
-        mend = "mend or drop the line"
-        rows = parsed.row[bad]
-        problems.rows(path.name, rows, None, "a number is missing", mend)
+    for name, column in zip(names, table.T, strict=True):
+        rows = parsed.row[~np.isfinite(column)]
+        message = "the number is missing or infinite"
+        problems.rows(path.name, rows, name, message, "mend or drop the line")
     return table
 
 
@@ -183,7 +186,7 @@ def _read_barcodes(path: Path, problems: Problems) -> dict[int, int]:
     if not path.is_file():
         problems.add(path.name, "is missing", "name the folder that holds it")
         return {}
-    table = _read_text(path, 2, problems)
+    table = _read_text(path, ("subject", "barcode"), problems)
     subjects: dict[int, int] = {}
     for subject, barcode in table.tolist():
         if subject != subject // 1 or barcode != barcode // 1:

@@ -196,7 +196,7 @@ def test_bad_cells_keep_their_rows_beside_blank_lines(tmp_path: Path) -> None:
     text = "t_s,vx_mps,wz_radps\n0,1,0\n\n1,x,0\n1,2\n2,1,0\n"
     problems = refused(good(tmp_path, otter__odometry_csv=text))
     assert [(p.row, p.message) for p in problems] == [
-        (5, "2 cells where the header has 3"),
+        (5, "2 cells where there should be 3"),
         (4, "'x' is not a number"),
     ]
 
