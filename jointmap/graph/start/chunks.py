@@ -79,31 +79,35 @@ def accumulate(delta: Floats, start: Bools, dimension: int) -> Floats:
     return np.asarray(pose)
 
 
-def cut(steps: Steps, keyframes: Keyframes, starts: Bools, widen: float = 1.0) -> Ints:
+def cut(steps: Steps, starts: Bools, widen: float = 1.0, pieces: int = 1) -> Ints:
     """Return the first keyframes (C + 1,) of the chunks, robots in order.
 
-    ``starts`` marks keyframes that begin a robot or follow a break; ``widen`` scales the limits.
+    ``starts`` marks keyframes that begin a robot or follow a break; ``widen`` scales the limits;
+    every run is cut into at least ``pieces`` of about the same motion.
     """
     bounds = [0]
     head = np.cumsum(np.where(starts, 0.0, np.nan_to_num(steps.turn_variance, posinf=0.0)))
     move = np.cumsum(np.where(starts, 0.0, np.nan_to_num(steps.shift_variance, posinf=0.0)))
     path = np.cumsum(np.where(starts, 0.0, steps.length))
+    moved = np.cumsum(np.where(starts, 0.0, steps.length + steps.turned))
     runs = np.append(np.flatnonzero(starts), len(starts))
-    most = MOST_CHUNKS
     for lo, hi in pairwise(runs):
         scale = widen
         while True:
-            mine = _cut_run(head[lo:hi], move[lo:hi], path[lo:hi], scale)
-            if len(mine) <= most:
+            mine = _cut_run(head[lo:hi], move[lo:hi], path[lo:hi], moved[lo:hi], scale, pieces)
+            if len(mine) <= MOST_CHUNKS:
                 break
             scale *= 1.5
         bounds.extend(int(lo) + m for m in mine)
     return np.array(bounds, dtype=np.int64)
 
 
-def _cut_run(head: Floats, move: Floats, path: Floats, widen: float) -> list[int]:
+def _cut_run(
+    head: Floats, move: Floats, path: Floats, moved: Floats, widen: float, pieces: int
+) -> list[int]:
     """Return the ends of the chunks of one unbroken run."""
     ends: list[int] = []
+    most = (moved[-1] - moved[0]) / pieces * (1.0 + 1e-9) if pieces > 1 else np.inf
     lo = 0
     while lo < len(head):
         turn = head[lo:] - head[lo]
@@ -112,6 +116,7 @@ def _cut_run(head: Floats, move: Floats, path: Floats, widen: float) -> list[int
         shift2 = 0.5 * (move[lo:] - move[lo]) + 0.5 * turn * (0.5 * along) ** 2 / 3.0
         allowed = widen * np.maximum(POSITION_LIMIT, POSITION_SHARE * along)
         good = (0.5 * turn <= (widen * HEADING_LIMIT) ** 2) & (shift2 <= allowed**2)
+        good &= moved[lo:] - moved[lo] <= most
         bad = np.flatnonzero(~good)
         lo += max(int(bad[0]), 1) if len(bad) else len(good)
         ends.append(lo)
@@ -129,13 +134,14 @@ def make_chunks(
     dimension: int,
     upright: bool,
     widen: float = 1.0,
+    pieces: int = 1,
 ) -> Chunks:
     """Cut all robots' runs and express keyframes in the frames of their anchors."""
     lie = frames.group(dimension)
     count = len(keyframes.robot)
     starts = breaks.copy()
     starts[keyframes.first[:-1][np.diff(keyframes.first) > 0]] = True
-    first = cut(steps, keyframes, starts, widen)
+    first = cut(steps, starts, widen, pieces)
     of_keyframe = np.repeat(np.arange(len(first) - 1), np.diff(first))
     anchor = (first[:-1] + first[1:] - 1) // 2
     frame = _upright(reckoned[anchor]) if upright and dimension == 3 else reckoned[anchor]

@@ -171,13 +171,18 @@ def add_landmarks(
 
 
 def add_meetings(
-    collect: Collector, condensed: Condensed, met: Met, unit: Ints, poses: Floats
+    collect: Collector, condensed: Condensed, met: Met, unit: Ints, poses: Floats, moment: Ints
 ) -> None:
-    """Pair the points of encounters between chunks of different units, one per meeting."""
+    """Pair the points of encounters between chunks of different units, one per moment.
+
+    ``moment`` (K,) numbers the stretches of time that count as one occasion.
+    """
     lie, touches = collect.lie, condensed.touches
     apart = np.flatnonzero(unit[touches.a] != unit[touches.b])
-    burst = met.burst[condensed.touch_row[apart]]
-    code = np.stack([touches.a[apart], touches.b[apart], burst], axis=1)
+    source = condensed.touch_row[apart]
+    code = np.stack(
+        [touches.a[apart], touches.b[apart], met.burst[source], moment[met.a[source]]], axis=1
+    )
     row = apart[_middle_of_groups(code)]
     row = row[_thin(np.stack([unit[touches.a[row]], unit[touches.b[row]]], axis=1), lie.dim)]
     a, b = touches.a[row], touches.b[row]
@@ -185,13 +190,12 @@ def add_meetings(
     own = turn @ touches.covariance[row] @ np.swapaxes(turn, -1, -2)
     left = collect.add(unit[a], lie.transform(poses[a], touches.at[row]), own, a, touches.at[row])
     right = collect.add(unit[b], lie.transform(poses[b], touches.of[row]), None, b, touches.of[row])
-    pair = np.stack([np.minimum(a, b), np.maximum(a, b)], axis=1)
-    _, key = np.unique(pair, axis=0, return_inverse=True)
-    collect.pair(left, right, np.arange(len(row)), ENCOUNTER, key.ravel())
+    key = _occasion(met, condensed.touch_row[row], unit[a], unit[b], moment)
+    collect.pair(left, right, np.arange(len(row)), ENCOUNTER, key)
 
 
 def add_closures(
-    collect: Collector, condensed: Condensed, unit: Ints, poses: Floats, met: Met
+    collect: Collector, condensed: Condensed, met: Met, unit: Ints, poses: Floats, moment: Ints
 ) -> None:
     """Stand-in points of relative poses between chunks of different units."""
     lie, closures = collect.lie, condensed.closures
@@ -216,9 +220,8 @@ def add_closures(
     ua, ub = unit[a][repeat], unit[b][repeat]
     left = collect.add(ua, lie.transform(poses[a][repeat], at), own, a[repeat], at)
     right = collect.add(ub, lie.transform(poses[b][repeat], of), None, b[repeat], of)
-    pair = np.stack([np.minimum(a, b), np.maximum(a, b)], axis=1)
-    _, key = np.unique(pair, axis=0, return_inverse=True)
-    collect.pair(left, right, repeat, CLOSURE, key.ravel())
+    key = _occasion(met, condensed.closure_row[row], unit[a], unit[b], moment)
+    collect.pair(left, right, repeat, CLOSURE, key)
 
 
 def add_fixes(
@@ -240,6 +243,15 @@ def add_fixes(
     )
     right = collect.add(np.full(len(row), site_unit), pins.at[row], pins.covariance[row])
     collect.pair(left, right, np.arange(len(row)), FIX, np.arange(len(row)))
+
+
+def _occasion(met: Met, row: Ints, unit_a: Ints, unit_b: Ints, moment: Ints) -> Ints:
+    """Number the occasions: same two units at the same two moments, whoever saw whom."""
+    code = np.stack([unit_a, moment[met.a[row]], unit_b, moment[met.b[row]]], axis=1)
+    swap = unit_a > unit_b
+    code[swap] = code[swap][:, [2, 3, 0, 1]]
+    _, key = np.unique(code, axis=0, return_inverse=True)
+    return np.asarray(key.ravel(), dtype=np.int64)
 
 
 def _middle_of_groups(code: Ints) -> Ints:

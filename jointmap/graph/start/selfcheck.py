@@ -62,9 +62,7 @@ class _Motion:
     shift_variance: float
 
 
-def check_odometry(
-    condensed: Condensed, chunks: Chunks, steps: Steps, robots: int, form: Form
-) -> OdometryCheck:
+def check_odometry(condensed: Condensed, chunks: Chunks, robots: int, form: Form) -> OdometryCheck:
     """Compare odometry with landmarks robot by robot; 1 where there is too little to tell."""
     motions = _motions(condensed, chunks, form)
     values = np.ones((4, robots))
@@ -144,7 +142,7 @@ def _scale(measured: Floats, odometry: Floats, least: float) -> float:
     total = np.cumsum(weight[order])
     scale = float(ratio[order][np.searchsorted(total, 0.5 * total[-1])])
     spread = 1.4826 * float(np.median(np.abs(ratio - scale)))
-    sure = abs(scale - 1.0) > 2.0 * 1.2533 * spread / np.sqrt(np.count_nonzero(good))
+    sure = abs(scale - 1.0) > 4.0 * 1.2533 * spread / np.sqrt(np.count_nonzero(good))
     inside = _SCALE_LIMITS[0] < scale < _SCALE_LIMITS[1]
     return scale if sure and inside else 1.0
 

@@ -16,10 +16,10 @@ from jointmap.graph.start.align import form_of
 from jointmap.graph.start.chain import chain
 from jointmap.graph.start.chunks import Chunks, accumulate, make_chunks
 from jointmap.graph.start.condense import Condensed, condense
-from jointmap.graph.start.gather import Material
+from jointmap.graph.start.gather import Material, Steps
 from jointmap.graph.start.net import Joints, Net, Pins, Seen, Touches
 from jointmap.graph.start.relax import relax
-from jointmap.graph.start.selfcheck import OdometryCheck, check_odometry, corrected
+from jointmap.graph.start.selfcheck import check_odometry, corrected
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -27,6 +27,8 @@ Bools = NDArray[np.bool_]
 
 #: Times that chunks are cut anew after the odometry was found to be scaled or worse than stated.
 _REPEATS = 3
+#: Pieces of equal motion that a run is cut into to check its odometry.
+_PROBES = 40
 #: Widening of the chunks tried in turn until half of the sighted tracks can be placed.
 _WIDEN = (1.0, 2.0, 4.0, 8.0)
 _PLACED_SHARE = 0.5
@@ -39,7 +41,7 @@ class Solo:
     ``unit`` (C,) run of each chunk, ``units`` their number. Point variables are pairs of run and
     track: ``point_unit``, ``point_track`` (L,), positions ``points`` (L, d) in the run's frame.
     ``poses`` (C, *shape) of the chunks. ``net`` holds what lies within runs. ``scale`` (2, R)
-    translation and rotation of each robot's odometry.
+    translation and rotation of each robot's odometry; ``steps`` and ``reckoned`` have it applied.
     """
 
     chunks: Chunks
@@ -53,6 +55,7 @@ class Solo:
     points: Floats
     net: Net
     scale: Floats
+    steps: Steps
     reckoned: Floats
 
 
@@ -62,19 +65,19 @@ def solve_alone(problem: Problem, material: Material) -> Solo:
     steps, reckoned = material.steps, problem.dead_reckoning
     scale = np.ones((2, robots))
     form = form_of(problem.dimension, problem.gravity_aligned)
-    for attempt in range(_REPEATS):
-        current = replace(material, steps=steps)
-        chunks, condensed = _cut(problem, current, reckoned)
-        check = check_odometry(condensed, chunks, steps, robots, form)
-        if attempt + 1 == _REPEATS or not check.worth_repeating:
+    for _ in range(_REPEATS):
+        probe = _cut(problem, replace(material, steps=steps), reckoned, (1.0,), _PROBES)
+        check = check_odometry(probe[1], probe[0], robots, form)
+        if not check.worth_repeating:
             break
         steps = corrected(steps, problem.keyframes.robot, check, problem.dimension)
         scale *= np.stack([check.translation, check.rotation])
-        reckoned = _reckon(problem, steps.delta, check)
-    return _solve(problem, chunks, condensed, reckoned, scale)
+        reckoned = _reckon(problem, steps.delta)
+    chunks, condensed = _cut(problem, replace(material, steps=steps), reckoned, _WIDEN)
+    return _solve(problem, chunks, condensed, steps, reckoned, scale)
 
 
-def _reckon(problem: Problem, delta: Floats, check: OdometryCheck) -> Floats:
+def _reckon(problem: Problem, delta: Floats) -> Floats:
     """Accumulate corrected increments from each robot's first pose on."""
     lie = frames.group(problem.dimension)
     starts = problem.breaks.copy()
@@ -85,9 +88,13 @@ def _reckon(problem: Problem, delta: Floats, check: OdometryCheck) -> Floats:
     return lie.compose(origin, accumulate(delta, starts, problem.dimension))
 
 
-def _cut(problem: Problem, material: Material, reckoned: Floats) -> tuple[Chunks, Condensed]:
+def _cut(
+    problem: Problem, material: Material, reckoned: Floats, widths: tuple[float, ...],
+    pieces: int = 1,
+) -> tuple[Chunks, Condensed]:  # fmt: skip
+    """Cut chunks as short as still place half of the tracks; ``widths`` are tried in turn."""
     tracks = len(np.unique(material.sighted.track))
-    for widen in _WIDEN:
+    for widen in widths:
         chunks = make_chunks(
             material.steps,
             problem.keyframes,
@@ -96,6 +103,7 @@ def _cut(problem: Problem, material: Material, reckoned: Floats) -> tuple[Chunks
             problem.dimension,
             problem.gravity_aligned,
             widen,
+            pieces,
         )
         condensed = condense(material, chunks, problem.dimension)
         placed = len(np.unique(condensed.seen.point))
@@ -105,7 +113,12 @@ def _cut(problem: Problem, material: Material, reckoned: Floats) -> tuple[Chunks
 
 
 def _solve(
-    problem: Problem, chunks: Chunks, condensed: Condensed, reckoned: Floats, scale: Floats
+    problem: Problem,
+    chunks: Chunks,
+    condensed: Condensed,
+    steps: Steps,
+    reckoned: Floats,
+    scale: Floats,
 ) -> Solo:
     lie = frames.group(problem.dimension)
     form = form_of(problem.dimension, problem.gravity_aligned)
@@ -131,6 +144,7 @@ def _solve(
         relaxed.points,
         net,
         scale,
+        steps,
         reckoned,
     )
 

@@ -36,6 +36,8 @@ Bools = NDArray[np.bool_]
 
 #: Name of the site frame in the report of links.
 SITE = "site"
+#: Meetings and closures of two robots within the same stretch of this length count once (s).
+_OCCASION_S = 5.0
 
 
 @dataclass(frozen=True)
@@ -145,8 +147,10 @@ def _link_material(problem: Problem, material: Material, solo: Solo) -> LinkMate
         absolute.control_sigma,
         site,
     )
-    collect.add_meetings(gatherer, solo.condensed, material.met, solo.unit, solo.poses)
-    collect.add_closures(gatherer, solo.condensed, solo.unit, solo.poses, material.met)
+    met = material.met
+    moment = np.floor(problem.keyframes.t_s / _OCCASION_S).astype(np.int64)
+    collect.add_meetings(gatherer, solo.condensed, met, solo.unit, solo.poses, moment)
+    collect.add_closures(gatherer, solo.condensed, met, solo.unit, solo.poses, moment)
     collect.add_fixes(gatherer, solo.condensed, absolute, solo.unit, solo.poses, site)
     features, pairings = gatherer.done()
     doubt = feature_covariance(
