@@ -13,11 +13,11 @@ Bools = NDArray[np.bool_]
 
 #: Candidates per landmark from points and rays, and directions tried around a range.
 _FEW = 12
-_DIRECTIONS = {2: 72, 3: 240}
+_DIRECTIONS = {2: 60, 3: 200}
 #: Rows of one landmark that judge its candidates.
-_JUDGES = 40
+_JUDGES = 24
 #: Rows times candidates evaluated in one go.
-_BATCH = 400_000
+_BATCH = 200_000
 
 
 def candidate_points(rows: SightingRows, count: Ints) -> tuple[Floats, Floats]:
@@ -40,6 +40,7 @@ def candidate_points(rows: SightingRows, count: Ints) -> tuple[Floats, Floats]:
         (by_range, _circles, True),
     ):
         which = np.flatnonzero(mine)
+        which = which[np.argsort(count[which], kind="stable")]
         width = _DIRECTIONS[d] if twins else _FEW
         size = max(1, _BATCH // (_JUDGES * width))
         for start in range(0, len(which), size):
@@ -156,10 +157,11 @@ def unit_directions(dimension: int, number: int) -> Floats:
 def _judge(rows: SightingRows, count: Ints, batch: Ints, points: Floats) -> Floats:
     """Robust cost (B, M) of candidates (B, M, d), judged by some rows of each group."""
     size = np.minimum(count[batch], _JUDGES)
-    judges = _pick(rows, np.ones(len(rows.group), dtype=bool), batch, _JUDGES, 0.0)
+    number = int(size.max())
+    judges = _pick(rows, np.ones(len(rows.group), dtype=bool), batch, number, 0.0)
     flat = rows.take(np.repeat(judges.ravel(), points.shape[1]))
-    at = np.repeat(points[:, None], _JUDGES, axis=1).reshape(-1, points.shape[2])
-    cost = robust_cost(flat, at).reshape(len(batch), _JUDGES, points.shape[1])
+    at = np.repeat(points[:, None], number, axis=1).reshape(-1, points.shape[2])
+    cost = robust_cost(flat, at).reshape(len(batch), number, points.shape[1])
     # Small groups repeat rows in the even choice; the mean is not disturbed by that.
     return np.asarray(cost.mean(axis=1) * size[:, None])
 

@@ -45,31 +45,52 @@ class SightingRows:
 def residuals(rows: SightingRows, points: Floats) -> tuple[Floats, Floats]:
     """Normalised residuals (n, 6) and Jacobians (n, 6, d) by the points (n, d); absent: zero."""
     d = points.shape[1]
-    local = np.einsum("nji,nj->ni", rows.rotation, points - rows.origin)
-    x, y = local[:, 0], local[:, 1]
-    z = local[:, 2] if d == 3 else np.zeros_like(x)
+    x, y, z = _local(rows, points)
     flat2 = np.maximum(x**2 + y**2, 1e-12)
     flat, full2 = np.sqrt(flat2), flat2 + z**2
     full = np.sqrt(full2)
-    residual = np.stack([np.arctan2(y, x), np.arctan2(z, flat), full, x, y, z], axis=1) - rows.value
-    residual[:, :2] = np.remainder(residual[:, :2] + np.pi, 2.0 * np.pi) - np.pi
     by_local = np.zeros((len(x), 6, 3))
     by_local[:, 0, 0], by_local[:, 0, 1] = -y / flat2, x / flat2
     by_local[:, 1, 0], by_local[:, 1, 1] = -x * z / (flat * full2), -y * z / (flat * full2)
     by_local[:, 1, 2] = flat / full2
     by_local[:, 2] = np.stack([x, y, z], axis=1) / full[:, None]
     by_local[:, [3, 4, 5], [0, 1, 2]] = 1.0
+    residual, scale = _normalised(rows, x, y, z)
+    jacobian = by_local[:, :, :d] @ np.swapaxes(rows.rotation, 1, 2) * scale[:, :, None]
+    return residual, jacobian
+
+
+def _local(rows: SightingRows, points: Floats) -> tuple[Floats, Floats, Floats]:
+    """Coordinates of points (n, d) in the sensor frames."""
+    difference = points - rows.origin
+    local = (np.swapaxes(rows.rotation, 1, 2) @ difference[:, :, None])[:, :, 0]
+    z = local[:, 2] if points.shape[1] == 3 else np.zeros(len(local))
+    return local[:, 0], local[:, 1], z
+
+
+def _normalised(rows: SightingRows, x: Floats, y: Floats, z: Floats) -> tuple[Floats, Floats]:
+    """Normalised residuals (n, 6) and 1 / sigma (n, 6), both zero where nothing was observed."""
     seen = np.isfinite(rows.value)
-    if d == 2:
+    if rows.origin.shape[1] == 2:
         seen[:, [1, 5]] = False
-    scale = np.where(seen, 1.0 / np.where(seen, rows.sigma, 1.0), 0.0)
-    jacobian = np.einsum("nki,nji->nkj", by_local[:, :, :d], rows.rotation) * scale[:, :, None]
-    return np.where(seen, residual, 0.0) * scale, jacobian
+    flat = np.sqrt(x**2 + y**2)
+    predicted = (np.arctan2(y, x), np.arctan2(z, flat), np.sqrt(flat**2 + z**2), x, y, z)
+    residual, scale = np.zeros(rows.value.shape), np.zeros(rows.value.shape)
+    for k, value in enumerate(predicted):
+        mine = seen[:, k]
+        if not mine.any():
+            continue
+        rest = value[mine] - rows.value[mine, k]
+        if k < 2:
+            rest = np.remainder(rest + np.pi, 2.0 * np.pi) - np.pi
+        scale[mine, k] = 1.0 / rows.sigma[mine, k]
+        residual[mine, k] = rest * scale[mine, k]
+    return residual, scale
 
 
 def robust_cost(rows: SightingRows, points: Floats) -> Floats:
     """Cost (n,) of each row at a point (n, d): c m log(1 + s / (c m)), m components."""
-    residual, _ = residuals(rows, points)
+    residual, _ = _normalised(rows, *_local(rows, points))
     limit = CAUCHY2 * np.maximum(np.isfinite(rows.value).sum(axis=1), 1)
     return np.asarray(limit * np.log1p(np.sum(residual**2, axis=1) / limit))
 

@@ -51,14 +51,17 @@ class OdometryCheck:
 
 @dataclass(frozen=True)
 class _Motion:
-    """One motion between neighbouring anchors by landmarks and by odometry."""
+    """One motion between neighbouring anchors by landmarks and by odometry.
+
+    ``turn`` (1,) and ``shift`` (d,) are vectors, so that both are treated alike.
+    """
 
     robot: int
-    turn: float
-    odometry_turn: float
+    turn: Floats
+    odometry_turn: Floats
     turn_variance: float
-    path: float
-    odometry_path: float
+    shift: Floats
+    odometry_shift: Floats
     shift_variance: float
 
 
@@ -99,52 +102,69 @@ def _motion(
     lie = frames.group(len(translation))
     tangent = lie.log(lie.build(rotation, translation))
     odometry = lie.log(chunks.joint[c])
-    flat = lie.dim == 2
-    axis = 2
-    linear, other = (tangent[:2], odometry[:2]) if flat else (tangent[3:], odometry[3:])
-    own = covariance[2, 2]
-    shift = np.trace(covariance[:2, :2] if flat else covariance[3:, 3:]) / lie.dim
+    linear = slice(0, 2) if lie.dim == 2 else slice(3, 6)
+    # The turn is about the vertical (2-D, upright) or about the axis that odometry turned about.
+    axis = np.array([2])
     return _Motion(
         int(chunks.robot[c]),
-        float(tangent[axis]),
-        float(odometry[axis]),
-        float(own + chunks.joint_turn[c]),
-        float(np.linalg.norm(linear)),
-        float(np.linalg.norm(other)),
-        float(shift + chunks.joint_shift[c]),
+        tangent[axis],
+        odometry[axis],
+        float(covariance[2, 2] + chunks.joint_turn[c]),
+        tangent[linear],
+        odometry[linear],
+        float(np.trace(covariance[linear, linear]) / lie.dim + chunks.joint_shift[c]),
     )
 
 
 def _judge(motions: list[_Motion]) -> tuple[float, float, float, float]:
     if len(motions) < _LEAST_MOTIONS:
         return 1.0, 1.0, 1.0, 1.0
-    turn, odometry_turn, turn_variance, path, odometry_path, shift_variance = (
+    turn, odometry_turn, shift, odometry_shift = (
         np.array([getattr(m, name) for m in motions])
-        for name in (
-            "turn", "odometry_turn", "turn_variance", "path", "odometry_path", "shift_variance"
-        )
-    )  # fmt: skip
+        for name in ("turn", "odometry_turn", "shift", "odometry_shift")
+    )
+    turn_variance = np.array([m.turn_variance for m in motions])
+    shift_variance = np.array([m.shift_variance for m in motions])
     rotation = _scale(turn, odometry_turn, _LEAST_TURN)
-    translation = _scale(path, odometry_path, _LEAST_PATH)
+    translation = _scale(shift, odometry_shift, _LEAST_PATH)
     turn_rest = (turn - rotation * odometry_turn + np.pi) % (2.0 * np.pi) - np.pi
-    turn_factor = np.median(turn_rest**2 / turn_variance) / _MEDIAN
-    shift_factor = np.median((path - translation * odometry_path) ** 2 / shift_variance) / _MEDIAN
+    turn_factor = np.median(turn_rest[:, 0] ** 2 / turn_variance) / _MEDIAN
+    shift_rest = (shift - translation * odometry_shift) ** 2
+    shift_factor = np.median(shift_rest / shift_variance[:, None]) / _MEDIAN
     return translation, rotation, max(float(turn_factor), 1.0), max(float(shift_factor), 1.0)
 
 
 def _scale(measured: Floats, odometry: Floats, least: float) -> float:
-    """Weighted median of the ratios; 1 unless it is known and differs clearly from 1."""
-    good = np.abs(odometry) > least
-    if np.count_nonzero(good) < _LEAST_MOTIONS:
+    """Return the ratio of two motions (n, k); 1 unless it clearly differs from 1.
+
+    Noise in the divisor pulls a ratio towards zero. The ratio is therefore taken with either
+    motion as the divisor; these two err to opposite sides, and the one nearer to 1 counts.
+    """
+    forward = _ratio(measured, odometry, least)
+    backward = _ratio(odometry, measured, least)
+    if forward is None or backward is None:
         return 1.0
-    ratio, weight = measured[good] / odometry[good], np.abs(odometry[good])
+    low, high = sorted((forward, 1.0 / backward))
+    scale = low if low > 1.0 else min(1.0, high)
+    return scale if _SCALE_LIMITS[0] < scale < _SCALE_LIMITS[1] else 1.0
+
+
+def _ratio(a: Floats, b: Floats, least: float) -> float | None:
+    """Return the weighted median of a.b / b.b over motions b that are large enough.
+
+    1 when it is within four standard deviations of 1; None with too few motions.
+    """
+    square = np.sum(b * b, axis=1)
+    good = square > least**2
+    if np.count_nonzero(good) < _LEAST_MOTIONS:
+        return None
+    ratio, weight = np.sum(a * b, axis=1)[good] / square[good], np.sqrt(square[good])
     order = np.argsort(ratio)
     total = np.cumsum(weight[order])
     scale = float(ratio[order][np.searchsorted(total, 0.5 * total[-1])])
     spread = 1.4826 * float(np.median(np.abs(ratio - scale)))
     sure = abs(scale - 1.0) > 4.0 * 1.2533 * spread / np.sqrt(np.count_nonzero(good))
-    inside = _SCALE_LIMITS[0] < scale < _SCALE_LIMITS[1]
-    return scale if sure and inside else 1.0
+    return scale if sure and scale > 0.0 else 1.0
 
 
 def corrected(steps: Steps, robot: Ints, check: OdometryCheck, dimension: int) -> Steps:
