@@ -6,20 +6,16 @@ Everything heavy is imported inside the command that needs it, so that ``--help`
 from __future__ import annotations
 
 import argparse
-import json
-import os
-import shutil
 import signal
 import sys
-import traceback
+import threading
 from collections.abc import Callable, Sequence
-from dataclasses import asdict
 from pathlib import Path
 from types import FrameType
 from typing import TYPE_CHECKING, NoReturn
 
-from jointmap import __version__
-from jointmap.errors import JointMapError, LogFormatError
+from jointmap import __version__, terminal
+from jointmap.errors import JointMapError
 from jointmap.settings import DATUMS, KERNELS, NOISE_MODES, Settings
 
 if TYPE_CHECKING:
@@ -46,63 +42,27 @@ def main(arguments: Sequence[str] | None = None) -> int:
     int
         Exit code; argparse itself raises SystemExit(2) on wrong usage and (0) after ``--help``.
     """
-    signal.signal(signal.SIGTERM, _interrupt)
+    if threading.current_thread() is threading.main_thread():
+        signal.signal(signal.SIGTERM, _interrupt)
     given = list(sys.argv[1:] if arguments is None else arguments)
     args = _parser(given).parse_args(given)
     run: Callable[[argparse.Namespace], int] = args.run
     try:
-        code = run(args)
-        sys.stdout.flush()
-        return code
-    except BrokenPipeError:
-        # The reader of a pipe went away (`| head`); what was to be written to disk is written.
-        _abandon_stdout()
-        return OK
+        return run(args)
     except JointMapError as error:
-        _refuse(error, as_json=getattr(args, "json", False))
+        terminal.refuse(error, as_json=getattr(args, "json", False))
         return REFUSED
     except KeyboardInterrupt:
         print("interrupted: no result was written", file=sys.stderr)
         return INTERRUPTED
     except Exception as error:
-        _fault(error)
+        terminal.fault(error)
         return FAULT
 
 
 def _interrupt(signum: int, frame: FrameType | None) -> NoReturn:
     # The same way out as Ctrl-C: every `finally` on it runs.
     raise KeyboardInterrupt
-
-
-def _abandon_stdout() -> None:
-    """Keep the interpreter from flushing into the closed pipe once more at its end."""
-    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-
-
-def _refuse(error: JointMapError, *, as_json: bool) -> None:
-    """Say what was refused: every problem of the logs, or the message."""
-    problems = error.problems if isinstance(error, LogFormatError) else ()
-    if as_json:
-        told = {"ok": False, "message": str(error), "problems": [asdict(p) for p in problems]}
-        print(json.dumps(told, indent=2, ensure_ascii=False))
-    refused = [p for p in problems if not p.mended]
-    for problem in problems:
-        print(problem, file=sys.stderr)
-    if refused:
-        n = len(refused)
-        summary = f"the input was refused: {n} problem{'s' if n > 1 else ''} to mend"
-    else:
-        summary = str(error)
-    print(f"jointmap: {summary}", file=sys.stderr)
-
-
-def _fault(error: Exception) -> None:
-    if os.environ.get("JOINTMAP_TRACEBACK", "0") not in ("", "0"):
-        traceback.print_exc()
-    kind = type(error).__name__
-    print(f"jointmap: this is a fault of the program ({kind}: {error})", file=sys.stderr)
-    if os.environ.get("JOINTMAP_TRACEBACK", "0") in ("", "0"):
-        print("set JOINTMAP_TRACEBACK=1 to see where it happened", file=sys.stderr)
 
 
 def _parser(given: Sequence[str]) -> argparse.ArgumentParser:
@@ -143,10 +103,10 @@ def _simulate(args: argparse.Namespace) -> int:
     from jointmap.simulate.options import settings_from
     from jointmap.simulate.run import simulate
 
-    _tell(recover(args.out))
+    terminal.tell(recover(args.out))
     settings = settings_from(args)
     report = simulate(args.world, args.out, settings, seed=args.seed, replace=args.replace)
-    print("\n".join(report.lines()))
+    terminal.say("\n".join(report.lines()))
     return OK
 
 
@@ -162,9 +122,9 @@ def _import(args: argparse.Namespace) -> int:
     from jointmap.atomic import recover
     from jointmap.ingest.mrclam import import_mrclam
 
-    _tell(recover(args.out))
+    terminal.tell(recover(args.out))
     report = import_mrclam(args.folder, args.out, replace=args.replace)
-    print("\n".join(report.lines()))
+    terminal.say("\n".join(report.lines()))
     return OK
 
 
@@ -180,12 +140,12 @@ def _check(args: argparse.Namespace) -> int:
     from jointmap.ingest.summary import summarise, summary_dict, summary_lines
     from jointmap.products.files import json_text
 
-    _tell(recover(args.survey))
+    terminal.tell(recover(args.survey))
     summary = summarise(read_survey(args.survey))
     if args.json:
-        print(json_text({"ok": True, **summary_dict(summary)}))
+        terminal.say(json_text({"ok": True, **summary_dict(summary)}))
     else:
-        print("\n".join(summary_lines(summary)))
+        terminal.say("\n".join(summary_lines(summary)))
     return OK
 
 
@@ -218,7 +178,7 @@ def _fuse(args: argparse.Namespace) -> int:
     from jointmap.progress import choose
 
     settings = _settings(args)
-    _tell(recover(args.out))
+    terminal.tell(recover(args.out))
     # Said before hours of work, not after them.
     check_free(args.out, replace=args.replace, marker=MARKER)
     progress = choose(quiet=args.quiet or args.json)
@@ -245,13 +205,13 @@ def _show(reference: Reference, args: argparse.Namespace) -> None:
     from jointmap.products.page import fuse_page, status_line
 
     if args.json:
-        print(json_text(reference.meta))
+        terminal.say(json_text(reference.meta))
         if reference.status != "ok":
             print(status_line(reference), file=sys.stderr)
     elif not args.quiet:
-        print(_styled(fuse_page(reference, _width(), args.out)), end="")
+        terminal.say(terminal.styled(fuse_page(reference, terminal.width(), args.out)))
     elif reference.status != "ok":
-        print(status_line(reference))
+        terminal.say(status_line(reference))
 
 
 def _fill_poses(parser: argparse.ArgumentParser) -> None:
@@ -275,9 +235,9 @@ def _poses(args: argparse.Namespace) -> int:
     answers = answer(reference, stamps)
     write_table(answers, args.out, replace=args.replace)
     unknown = int(answers["reason"].ne("").sum())
-    print(f"{len(answers):,} poses written to {args.out}")
+    terminal.say(f"{len(answers):,} poses written to {args.out}")
     if unknown:
-        print(f"{unknown:,} of them are incomplete; the column reason says why")
+        terminal.say(f"incomplete: {unknown:,}; the column reason says why")
     return OK
 
 
@@ -288,25 +248,3 @@ _COMMANDS: dict[str, tuple[Callable[[argparse.ArgumentParser], None], str]] = {
     "fuse": (_fill_fuse, "fuse a survey into a reference"),
     "poses": (_fill_poses, "pose and covariance of robots at given stamps"),
 }
-
-
-def _tell(done: str | None) -> None:
-    """Say what the recovery of a broken replacement did."""
-    if done:
-        print(f"jointmap: {done}", file=sys.stderr)
-
-
-def _width() -> int:
-    return min(max(shutil.get_terminal_size((80, 24)).columns, 60), 100)
-
-
-def _styled(page: str) -> str:
-    """Titles in bold on a terminal that may have colours (NO_COLOR is respected)."""
-    plain = os.environ.get("NO_COLOR") or os.environ.get("TERM", "") in ("", "dumb")
-    if plain or not sys.stdout.isatty():
-        return page
-    titles = (
-        f"\033[1m{line}\033[0m" if line[:1].isalpha() and line[-1:].isalpha() else line
-        for line in page.splitlines()
-    )
-    return "\n".join(titles) + "\n"

@@ -58,6 +58,8 @@ class Settings:
         own rate.
     burst_gap_s : float
         Sightings of one target by one sensor that follow each other within this are one burst.
+    burst_window_s : float
+        A burst ends after this time; rows of one burst share a part of their error.
     gate_measurement : float
         Probability that a correct measurement passes the test that rejects measurements.
     gate_association : float
@@ -94,6 +96,7 @@ class Settings:
     keyframe_merge_s: float = 1e-3
     gap_s: float | None = None
     burst_gap_s: float = 3.0
+    burst_window_s: float = 10.0
     gate_measurement: float = 0.999
     gate_association: float = 0.999
     noise: NoiseMode = "estimated"
@@ -115,6 +118,7 @@ class Settings:
             _number(name, getattr(self, name), above=0.0)
         _number("keyframe_merge_s", self.keyframe_merge_s, least=0.0)
         _number("burst_gap_s", self.burst_gap_s, above=0.0)
+        _number("burst_window_s", self.burst_window_s, above=0.0)
         for name in ("kernel_constant", "gap_s"):
             if getattr(self, name) is not None:
                 _number(name, getattr(self, name), above=0.0)

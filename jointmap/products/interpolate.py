@@ -8,7 +8,8 @@ adjoint, where they describe the same rigid motion, and are blended there:
 
 Neighbouring rows share nearly all their error. For such errors the blend is exact, and for errors
 of any other correlation it is an upper bound, because ``Var((1-s) a + s b)`` never exceeds
-``(1-s) Var(a) + s Var(b)``.
+``(1-s) Var(a) + s Var(b)``. Inside an outage of the odometry the motion itself is unknown as well:
+:mod:`jointmap.products.departure` adds what this robot may have done there.
 """
 
 from __future__ import annotations
@@ -21,6 +22,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from jointmap import frames
+from jointmap.products.departure import departure
 
 if TYPE_CHECKING:
     from jointmap.products.reference import Trajectory
@@ -70,8 +72,7 @@ def interpolate(trajectory: Trajectory, t_s: ArrayLike, outages: Floats) -> Pose
     trajectory : Trajectory
     t_s : (...) float
     outages : (m, 2) float
-        Intervals without odometry. Poses inside them are a guess on the geodesic; what the robot
-        did there is not known, hence no covariance.
+        Intervals without odometry, in order.
     """
     stamps = np.asarray(t_s, dtype=np.float64)
     flat = stamps.ravel()
@@ -80,9 +81,7 @@ def interpolate(trajectory: Trajectory, t_s: ArrayLike, outages: Floats) -> Pose
     after = row + (share > 0.0)
     joined = inside.copy()
     joined[inside] = trajectory.component[row[inside]] == trajectory.component[after[inside]]
-    pose, cov = _blend(trajectory, row[joined], after[joined], share[joined])
-    dark = _within(flat[joined], share[joined], outages)
-    cov[dark] = np.nan
+    pose, cov, dark = _blend(trajectory, row[joined], after[joined], share[joined], outages)
 
     width = trajectory.pose.shape[-1]
     answer = np.full((len(flat), width), np.nan)
@@ -119,8 +118,13 @@ def _locate(rows_s: Floats, t_s: Floats) -> tuple[Ints, Floats, Bools]:
     return np.where(onto, row + 1, row).astype(np.int64), np.where(onto, 0.0, share), inside
 
 
-def _blend(trajectory: Trajectory, row: Ints, after: Ints, share: Floats) -> tuple[Floats, Floats]:
-    """Pose rows and covariance (table order) at ``share`` of the way from ``row`` to ``after``."""
+def _blend(
+    trajectory: Trajectory, row: Ints, after: Ints, share: Floats, outages: Floats
+) -> tuple[Floats, Floats, Bools]:
+    """Pose rows and covariance (table order) at ``share`` of the way from ``row`` to ``after``.
+
+    The third result marks stamps in outages that the trajectory is too short to judge.
+    """
     group = frames.group(trajectory.dimension)
     start = group.from_rows(trajectory.pose[row])
     end = group.from_rows(trajectory.pose[after])
@@ -132,22 +136,35 @@ def _blend(trajectory: Trajectory, row: Ints, after: Ints, share: Floats) -> tup
         # NaN (unknown) must not spread from a row that has no share in the answer.
         part = weight[:, None, None] * (carry @ own @ np.swapaxes(carry, -1, -2))
         body += np.where(weight[:, None, None] > 0.0, part, 0.0)
-    return group.to_rows(middle), group.covariance_to_table(middle, body)
+    dark = np.zeros(len(row), dtype=bool)
+    inside = _outage_of(0.5 * (trajectory.t_s[row] + trajectory.t_s[after]), share, outages)
+    for k in np.unique(inside[inside >= 0]):
+        mine = inside == k
+        spread = departure(trajectory, outages[k], outages)
+        dark[mine] = spread is None
+        if spread is not None:
+            body[mine] += (4.0 * share * (1.0 - share))[mine, None, None] * spread
+    body[dark] = np.nan
+    return group.to_rows(middle), group.covariance_to_table(middle, body), dark
 
 
-def _within(t_s: Floats, share: Floats, outages: Floats) -> Bools:
-    """Stamps strictly inside an outage; its ends are rows and have their own covariance."""
+def _outage_of(middle_s: Floats, share: Floats, outages: Floats) -> Ints:
+    """Outage between the two rows of each stamp, -1 where there is none.
+
+    ``middle_s`` lies half-way between the rows, safely inside the outage if there is one. A stamp
+    on a row (share 0) is in none.
+    """
     if len(outages) == 0:
-        return np.zeros(len(t_s), dtype=bool)
-    after = np.searchsorted(outages[:, 0], t_s, side="right") - 1
-    inside = (after >= 0) & (t_s < outages[np.maximum(after, 0), 1])
-    return np.asarray(inside & (share > 0.0))
+        return np.full(len(middle_s), -1, dtype=np.int64)
+    found = np.searchsorted(outages[:, 0], middle_s, side="right") - 1
+    inside = (found >= 0) & (middle_s < outages[np.maximum(found, 0), 1]) & (share > 0.0)
+    return np.where(inside, found, -1).astype(np.int64)
 
 
 def _reasons(
     trajectory: Trajectory, t_s: Floats, inside: Bools, joined: Bools, dark: Bools
 ) -> NDArray[np.str_]:
-    reason = np.full(len(t_s), "", dtype="U96")
+    reason = np.full(len(t_s), "", dtype="U100")
     if len(trajectory) == 0:
         reason[:] = "the robot has no trajectory"
         return reason
@@ -155,5 +172,7 @@ def _reasons(
     reason[~inside] = f"outside the robot's span {first:.6f} .. {last:.6f} s"
     reason[np.isnan(t_s)] = "no stamp given"
     reason[inside & ~joined] = "between two parts that nothing connects"
-    reason[np.flatnonzero(joined)[dark]] = "odometry outage: the covariance is not known"
+    reason[np.flatnonzero(joined)[dark]] = (
+        "in an odometry outage; the path is too short to learn how far the robot may have gone"
+    )
     return reason

@@ -204,7 +204,8 @@ def _suspects(reference: Reference, width: int) -> list[str]:
         return ["No suspects."]
     shown = suspects.head(MOST_SUSPECTS)
     more = f" (first {len(shown)}; all in suspects.csv)" if len(suspects) > len(shown) else ""
-    lines = [f"Suspects, worst first{more}; paste the lines into edits.toml to mend:"]
+    lead = f"Suspects, worst first{more}; paste the lines into edits.toml to mend:"
+    lines = wrap(lead, width)
     for rank, row in enumerate(shown.itertuples(), 1):
         what = f"{row.kind}: {row.reason} (statistic {number(row.statistic)})"
         lines += wrap(what, width, f"{rank}. ")

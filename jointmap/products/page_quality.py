@@ -40,9 +40,7 @@ def _noise_table(told: pd.DataFrame) -> list[str]:
     shown = told.iloc[np.argsort(-gap, kind="stable")[:MOST_TERMS]]
     rows = [
         [
-            " ".join(
-                str(part) for part in (r.robot, r.sensor, r.component) if isinstance(part, str)
-            ),
+            _whose(r.robot, r.sensor, r.component),
             str(r.term),
             number(r.given),
             number(r.estimated),
@@ -57,12 +55,20 @@ def _calibration_lines(reference: Reference, width: int) -> list[str]:
     """Calibration values in force that differ from their nominal ones."""
     found = reference.calibration
     found = found[found["used"].fillna(False) & found["significant"].fillna(False)]
-    lines = []
-    for r in found.itertuples():
-        whose = f"{r.robot} {r.sensor}" if isinstance(r.sensor, str) else str(r.robot)
-        value, sigma = number(r.value), number(r.sigma)
-        lines += wrap(f"Calibrated: {whose} {r.parameter} = {value} +- {sigma}", width)
-    return lines
+    if found.empty:
+        return []
+    rows = [
+        [_whose(r.robot, r.sensor), str(r.parameter), number(r.value), number(r.sigma)]
+        for r in found.head(MOST_TERMS).itertuples()
+    ]
+    lines = ["", *table(["calibrated", "what", "found", "+-"], rows)]
+    more = len(found) - MOST_TERMS
+    return [*lines, *wrap(f"… and {more} more in calibration.csv.", width)] if more > 0 else lines
+
+
+def _whose(*names: object) -> str:
+    """Robot, sensor and component in one cell; unknown ones are left out."""
+    return " ".join(name for name in names if isinstance(name, str))
 
 
 def quality_section(reference: Reference, width: int) -> list[str]:

@@ -249,7 +249,7 @@ def test_poses_answers_a_file(tmp_path: Path, capsys: Captured) -> None:
     assert main(command) == 0
     said = capsys.readouterr().out
     assert "2 poses written" in said
-    assert "1 of them" in said
+    assert "incomplete: 1;" in said
     first = pd.read_parquet(out).iloc[0]
     row = reference(3).trajectories["otter"]
     assert first["x_m"] == pytest.approx(row.pose[5, 0], abs=1e-9)

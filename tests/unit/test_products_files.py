@@ -55,7 +55,21 @@ def test_the_folder_holds_the_files_and_columns_that_are_promised(tmp_path: Path
         "trajectory/otter.parquet",
     ]
     # The words of the published table of outputs, written out here on purpose.
-    assert pq.read_schema(folder / "trajectory/heron.parquet").names == ["t_s", "x_m", "y_m", "yaw_rad", "cov_x_x", "cov_x_y", "cov_x_yaw", "cov_y_y", "cov_y_yaw", "cov_yaw_yaw", "keyframe", "component", "trust"]
+    assert pq.read_schema(folder / "trajectory/heron.parquet").names == [
+        "t_s",
+        "x_m",
+        "y_m",
+        "yaw_rad",
+        "cov_x_x",
+        "cov_x_y",
+        "cov_x_yaw",
+        "cov_y_y",
+        "cov_y_yaw",
+        "cov_yaw_yaw",
+        "keyframe",
+        "component",
+        "trust",
+    ]
     header = (folder / "associations.csv").read_text().splitlines()[0]
     assert header == "robot,label,landmark,n_sightings,verdict,reason,statistic,alternative"
     header = (folder / "noise.csv").read_text().splitlines()[0]

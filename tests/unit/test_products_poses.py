@@ -140,13 +140,72 @@ def test_nothing_is_interpolated_between_unconnected_parts() -> None:
     assert np.isnan(found.pose[1]).all()
 
 
-def test_in_an_outage_the_covariance_is_unknown() -> None:
+def test_in_an_outage_of_a_short_path_the_covariance_is_unknown() -> None:
     whole = reference(2)
     found = whole.pose_at("otter", START_S + np.array([0.95, 1.0, 1.05, 1.1, 1.15]))
     unknown = np.isnan(found.cov).any(axis=(1, 2))
     assert unknown.tolist() == [False, False, True, False, False]
     assert np.isfinite(found.pose).all()
     assert "outage" in found.reason[2]
+
+
+def wandering(dimension: int, seed: int, n: int = 6000) -> Trajectory:
+    """Ten minutes of a robot that changes its speed and turn rate every few seconds."""
+    rng = np.random.default_rng(seed)
+    group = frames.group(dimension)
+    knots = rng.normal(0.0, 0.4, (n // 30 + 2, group.dof))
+    where = np.arange(n) / 30
+    step = np.stack([np.interp(where, np.arange(len(knots)), k) for k in knots.T], axis=-1) * 0.1
+    poses = group.identity(n)
+    for i in range(1, n):
+        poses[i] = group.retract(poses[i - 1], step[i])
+    return Trajectory(
+        t_s=START_S + 0.1 * np.arange(n),
+        pose=group.to_rows(poses),
+        cov=np.broadcast_to(1e-10 * np.eye(group.dof), (n, group.dof, group.dof)),
+        keyframe=np.ones(n, bool),
+        component=np.zeros(n, int),
+        trust=np.zeros(n, int),
+    )
+
+
+@pytest.mark.parametrize("dimension", [2, 3])
+def test_in_an_outage_the_covariance_covers_what_the_robot_did(dimension: int) -> None:
+    """Rows are taken out of a known path; the true poses there are held against the answers."""
+    full = wandering(dimension, 7)
+    n, gap = len(full), 21
+    first = np.arange(100, n - 100, 150)
+    hidden = (first[:, None] + np.arange(1, gap)).ravel()
+    left = np.setdiff1d(np.arange(n), hidden)
+    path = Trajectory(
+        **{
+            name: getattr(full, name)[left]
+            for name in ("t_s", "pose", "cov", "keyframe", "component", "trust")
+        }
+    )
+    intervals = np.stack([full.t_s[first], full.t_s[first + gap]], axis=1)
+    base = reference(dimension)
+    robots = base.robots.copy()
+    robots.loc[robots["robot"] == "heron", "outages"] = format_outages(intervals)
+    whole = replace(base, robots=robots, trajectories={**base.trajectories, "heron": path})
+    group = frames.group(dimension)
+    middle = first + gap // 2
+    pose, cov = whole.pose_at("heron", full.t_s[middle])
+    guess = group.from_rows(pose)
+    error = group.local(guess, group.from_rows(full.pose[middle]))
+    body = group.covariance_from_table(guess, cov)
+    nees = np.einsum("ni,ni->n", error, np.linalg.solve(body, error[..., None])[..., 0])
+    # 39 outages, nearly independent: the mean of chi-square with dof degrees of freedom has a
+    # standard deviation of sqrt(2 dof / 39); four of them on either side, and one more above for
+    # tails heavier than Gaussian.
+    spread = np.sqrt(2.0 * group.dof / len(nees))
+    assert len(nees) == 39
+    assert group.dof - 4.0 * spread < nees.mean() < group.dof + 5.0 * spread
+    # Without the departure the claim would be 1e-10 and absurd.
+    assert np.median(np.linalg.norm(error[:, :dimension], axis=1)) > 0.02
+    # Rows beside the outage keep their own covariance.
+    beside = whole.pose_at("heron", intervals.ravel())
+    np.testing.assert_allclose(np.trace(beside.cov, axis1=1, axis2=2), 1e-10 * group.dof, rtol=1e-6)
 
 
 def test_trust_is_that_of_the_worse_neighbour() -> None:
