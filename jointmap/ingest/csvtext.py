@@ -26,7 +26,8 @@ _ARROW = {
     "int64": pa.int64(),
     "text": pa.dictionary(pa.int32(), pa.string()),
 }
-_CHUNK = 1 << 26
+#: Bytes that are searched for line breaks at a time; small enough to stay in the cache.
+_CHUNK = 1 << 17
 
 
 @dataclass(frozen=True)
@@ -40,11 +41,11 @@ class Parsed:
 def header_of(data: memoryview) -> tuple[list[str], int]:
     """Names in the first line, stripped, and the offset of the first byte after it."""
     head = bytes(data[: 1 << 20])
-    end = head.find(b"\n")
-    line = head if end < 0 else head[:end]
-    text = line.decode("utf-8-sig", errors="replace").rstrip("\r")
+    found = re.search(rb"\r\n|\n|\r", head)
+    line, end = (head[: found.start()], found.end()) if found else (head, len(head))
+    text = line.decode("utf-8-sig", errors="replace")
     names = next(csv.reader([text], skipinitialspace=True), [])
-    return [n.strip() for n in names], len(head) if end < 0 else end + 1
+    return [n.strip() for n in names], end
 
 
 def parse_csv(

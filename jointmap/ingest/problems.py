@@ -22,7 +22,7 @@ class Problems:
 
     def __init__(self) -> None:
         self._found: list[LogProblem] = []
-        self._cells: dict[tuple[str, str], set[int]] = {}
+        self._cells: dict[tuple[str, str], NDArray[np.int64]] = {}
 
     def add(
         self,
@@ -54,9 +54,9 @@ class Problems:
         """
         index = np.arange(len(rows))
         if column is not None and not mended:
-            cells = self._cells.setdefault((path, column), set())
-            index = np.flatnonzero([int(r) not in cells for r in rows])
-            cells.update(int(r) for r in rows)
+            known = self._cells.get((path, column), np.empty(0, dtype=np.int64))
+            index = np.flatnonzero(~np.isin(rows, known))
+            self._cells[path, column] = np.concatenate([known, rows])
         for i in index[:LISTED_ROWS].tolist():
             one = message if isinstance(message, str) else message[min(i, len(message) - 1)]
             self.add(path, one, mend, row=int(rows[i]), column=column, mended=mended)

@@ -64,10 +64,11 @@ def read_survey(path: Path | str) -> Survey:
     config = read_config(files)
     if config is None:
         raise LogFormatError(problems.all())
-    survey = _read(files, config)
-    problems.raise_refused()
-    assert survey is not None  # nothing was refused, so there are robots
-    survey = _finish(survey, problems)
+    with np.errstate(all="ignore"):  # what the numbers are is for the checks to say
+        survey = _read(files, config)
+        problems.raise_refused()
+        assert survey is not None  # nothing was refused, so there are robots
+        survey = _finish(survey, problems)
     problems.raise_refused()
     survey = replace(survey, problems=problems.all(), inputs=dict(sorted(files.digests.items())))
     _freeze(survey)

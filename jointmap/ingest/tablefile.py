@@ -19,6 +19,9 @@ from jointmap.ingest.problems import Problems, close_match
 from jointmap.ingest.survey import Floats, Ints
 from jointmap.ingest.table import Names, Table
 
+#: No time, length, speed or angle of a survey is larger; such a cell is a fault of the log.
+LARGEST = 1e12
+
 
 def read_table(
     files: SurveyFiles, name: str, spec: schema.Table, asked_by: str, key: str
@@ -214,13 +217,14 @@ def _names_of(values: pa.ChunkedArray) -> Names:
 
 
 def _refuse_infinite(table: Table, numbers: dict[str, Floats], problems: Problems) -> None:
-    """Report infinite cells, and empty them for the checks that follow."""
+    """Report infinite and absurd cells, and empty them for the checks that follow."""
     for column, values in list(numbers.items()):
-        # One pass without temporaries for the usual case: a finite sum has no infinite term.
-        with np.errstate(invalid="ignore"):  # infinities of both signs
-            if np.isfinite(values.sum()):
-                continue
-        infinite = np.isinf(values)
-        message, mend = "the number is infinite", "leave the cell empty or mend it"
-        if table.complain(problems, infinite, column, message, mend):
-            numbers[column] = np.where(infinite, np.nan, values)
+        largest = max(np.fmax.reduce(values, initial=0.0), -np.fmin.reduce(values, initial=0.0))
+        if largest <= LARGEST:
+            continue
+        infinite, absurd = np.isinf(values), np.abs(values) > LARGEST
+        mend = "leave the cell empty or mend it"
+        table.complain(problems, infinite, column, "the number is infinite", mend)
+        message = f"the number is beyond {LARGEST:.0e}"
+        table.complain(problems, absurd & ~infinite, column, message, mend)
+        numbers[column] = np.where(absurd, np.nan, values)

@@ -223,6 +223,11 @@ def test_infinite(tmp_path: Path, cell: str) -> None:
     assert problem.message == "the number is infinite"
 
 
+def test_absurd_number(tmp_path: Path) -> None:
+    problem = one_refused(good(tmp_path, heron__sightings_csv=SIGHTINGS.replace("1.5,", "1e200,")))
+    assert (problem.row, problem.message) == (3, "the number is beyond 1e+12")
+
+
 @pytest.mark.parametrize("cell", ["", "NaN", "nan"])
 def test_nan_where_a_number_is_needed(tmp_path: Path, cell: str) -> None:
     text = HERON.replace("3.0,1.5,", f"3.0,{cell},")
