@@ -203,7 +203,7 @@ def _online() -> tuple[Table, ...]:
     cov = by_dimension("cov", "as estimator.toml says: fixed axes or body tangent")
     stamps = stamp("t_s", "time by the robot's clock")
     return (
-        Table("online_trajectory", "online/NAME/ROBOT.csv", "what an estimator reported at the time",
+        Table("online_trajectory", "online/NAME/ROBOT.csv", "what an estimator reported then",
               (*stamps, *pose, *cov)),
         Table("online_joint", "online/NAME/joint.parquet", "cross-covariance of two robots",
               (*stamps, text("robot_a", "rows"), text("robot_b", "columns"),
