@@ -123,7 +123,8 @@ def recover(path: Path | str) -> str | None:
     try:
         with _locked(target):
             return _settle(target)
-    except OutputExistsError:
+    except (OutputExistsError, PermissionError):
+        # Somebody is at work there, or the folder may only be read: nothing to mend from here.
         return None
 
 

@@ -6,6 +6,7 @@ Everything heavy is imported inside the command that needs it, so that ``--help`
 from __future__ import annotations
 
 import argparse
+import errno
 import signal
 import sys
 import threading
@@ -31,6 +32,15 @@ _EXIT_CODES = """exit codes:
   3    done, but not to be trusted as it is; the last line says why
   130  interrupted
 """
+#: What a disk may refuse without a fault of the program.
+_DISK_ERRORS = {
+    errno.EACCES,
+    errno.EPERM,
+    errno.EROFS,
+    errno.ENOSPC,
+    errno.EDQUOT,
+    errno.ENAMETOOLONG,
+}
 _FORMATS = "CSV, .csv.gz or Parquet, by its name"
 
 
@@ -55,6 +65,12 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except KeyboardInterrupt:
         print("interrupted: no result was written", file=sys.stderr)
         return INTERRUPTED
+    except OSError as error:
+        if error.errno not in _DISK_ERRORS:
+            terminal.fault(error)
+            return FAULT
+        print(f"jointmap: {error.filename or 'disk'}: {error.strerror}", file=sys.stderr)
+        return REFUSED
     except Exception as error:
         terminal.fault(error)
         return FAULT

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import json
 import os
 import shutil
@@ -14,6 +15,9 @@ from jointmap.errors import JointMapError, LogFormatError
 
 def say(text: str) -> None:
     """Print to stdout; a reader that went away (``| head``) is no fault and loses no result."""
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        # A terminal without UTF-8 shows a question mark for what it cannot show.
+        sys.stdout.reconfigure(errors="replace")
     try:
         print(text.rstrip("\n"), flush=True)
     except BrokenPipeError:

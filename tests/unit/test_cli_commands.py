@@ -275,3 +275,9 @@ def test_import_needs_the_logs(tmp_path: Path, capsys: Captured) -> None:
     target = str(tmp_path / "s")
     assert main(["import", "mrclam", str(tmp_path / "none"), "--out", target]) == 2
     assert "none" in capsys.readouterr().err
+
+
+def test_a_disk_that_refuses_is_no_fault(tmp_path: Path, capsys: Captured) -> None:
+    out = tmp_path / ("x" * 300)
+    assert main(["simulate", "quarry-2d", "--out", str(out), "--duration-s", "10"]) == 2
+    assert "File name too long" in capsys.readouterr().err

@@ -73,6 +73,18 @@ def test_help_starts_at_once_and_loads_nothing_heavy() -> None:
     assert min(seconds) < 0.4
 
 
+def test_reading_a_reference_needs_no_solver() -> None:
+    code = """
+import sys, jointmap
+jointmap.read_reference
+print({"gtsam", "numba", "jointmap.solve", "jointmap.graph"} & set(sys.modules))
+"""
+    done = subprocess.run(
+        [sys.executable, "-c", code], env=ENV, capture_output=True, text=True, check=True
+    )
+    assert done.stdout == "set()\n"
+
+
 def test_every_command_has_help() -> None:
     for name in ("simulate", "import", "check", "fuse", "poses"):
         done = subprocess.run(
@@ -141,3 +153,31 @@ def test_progress_is_drawn_on_a_terminal(survey: Path, tmp_path: Path) -> None:
     shown = _on_a_terminal(words, b"cost 12.5", {**ENV, "TERM": "xterm"})
     assert b"\rsolve [" in shown
     assert b"/1000  cost 12.5" in shown
+
+
+def test_a_terminal_of_another_alphabet_is_no_fault(survey: Path) -> None:
+    code = "from jointmap.terminal import say; say('odometry … µ')"
+    done = subprocess.run(
+        [sys.executable, "-c", code],
+        env={**ENV, "PYTHONIOENCODING": "ascii", "PYTHONUTF8": "0"},
+        capture_output=True,
+        check=True,
+    )
+    assert done.stdout == b"odometry ? ?\n"
+
+
+@pytest.mark.parametrize(
+    ("env", "bold"),
+    [
+        ({"TERM": "xterm"}, True),
+        ({"TERM": "xterm", "NO_COLOR": "1"}, False),
+        ({"TERM": "dumb"}, False),
+    ],
+)
+def test_titles_are_bold_where_that_is_wanted(env: dict[str, str], bold: bool) -> None:
+    code = "from jointmap.terminal import say, styled\n"
+    code += "say(styled('What went in\\n  heron\\n')); input()"
+    clean = {name: value for name, value in ENV.items() if name != "NO_COLOR"}
+    shown = _on_a_terminal([sys.executable, "-c", code], b"heron", {**clean, **env})
+    assert (b"\x1b[1mWhat went in\x1b[0m" in shown) == bold
+    assert b"What went in" in shown
