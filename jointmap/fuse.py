@@ -22,7 +22,7 @@ from jointmap.graph.calibrate import (
     odometry_sensitivity,
     reintegrate,
 )
-from jointmap.graph.noise import Noise, initial_noise
+from jointmap.graph.noise import Noise, block_covariance, initial_noise, whitening
 from jointmap.graph.problem import Problem, State
 from jointmap.graph.start import StartResult, initial_state
 from jointmap.ingest.survey import Survey
@@ -41,7 +41,7 @@ from jointmap.solve.session import (
     usable_rows,
     whiten_blocks,
 )
-from jointmap.solve.system import System, whitened_norm, whitened_residual
+from jointmap.solve.system import Part, System, linearise, whitened_norm
 from jointmap.trust.components import update_noise
 from jointmap.trust.outcome import Outcome, association_evidence
 from jointmap.trust.quality import Quality, assess
@@ -130,6 +130,7 @@ def _prepare(survey: Survey, settings: Settings, progress: Progress) -> _Run:
             settings.keyframe_spacing_s,
             settings.gap_s,
             settings.burst_gap_s,
+            settings.burst_window_s,
         ),
         calibration.values,
     )
@@ -213,12 +214,19 @@ def _gate_by_norm(run: _Run, system: System) -> None:
     used = [rows.copy() for rows in run.decisions.usable]
     weight = [np.ones(len(rows)) for rows in used]
     for part in system.parts:
-        norm2 = whitened_norm(whitened_residual(system, part, run.state)) ** 2
+        norm2 = _own_statistic(run, system, part)
         dof = np.full(len(norm2), float(part.whiten.shape[1]))
         keep, weights = gate_rows(part.block, norm2, dof, run.settings.gate_measurement)
         used[part.at][part.index] = keep
         weight[part.at][part.index] = weights
     run.decisions = replace(run.decisions, used=tuple(used), weight=tuple(weight))
+
+
+def _own_statistic(run: _Run, system: System, part: Part) -> Floats:
+    """Squared residual (n,) of each row in units of its own sigma, not of its burst's."""
+    covariance = block_covariance(part.block, run.problem, run.noise, single=True)
+    residual = linearise(system, part, run.state, jacobians=False).residual
+    return whitened_norm(np.einsum("nij,nj->ni", whitening(covariance), residual)) ** 2
 
 
 def _rounds(run: _Run) -> bool:
@@ -303,6 +311,8 @@ def _review_rows(run: _Run, system: System, quality: Quality) -> bool:
         if part.block.kind == "odometry":
             continue
         statistic, dof = stats.statistic()
+        single = _own_statistic(run, system, part)
+        statistic, dof = np.maximum(statistic, single), np.where(dof > 0, part.whiten.shape[1], 0)
         scales[part.at] = statistic_scale(statistic, dof)
         keep, _ = gate_rows(part.block, statistic, dof, gate, scales[part.at])
         used[part.at][part.index] = keep
@@ -310,7 +320,7 @@ def _review_rows(run: _Run, system: System, quality: Quality) -> bool:
     if any(rows.any() for rows in left):
         outside = _system(run, robust=False, used=left)
         for part in outside.parts:
-            norm2 = whitened_norm(whitened_residual(outside, part, run.state)) ** 2
+            norm2 = _own_statistic(run, outside, part)
             dof = np.full(len(norm2), float(part.whiten.shape[1]))
             keep, _ = gate_rows(part.block, norm2, dof, gate, scales.get(part.at, 1.0))
             used[part.at][part.index] = keep

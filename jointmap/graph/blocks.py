@@ -40,6 +40,10 @@ class BuilderSettings(Protocol):
     def burst_gap_s(self) -> float:
         """Sightings of one target that follow each other within it are one burst."""
 
+    @property
+    def burst_window_s(self) -> float:
+        """A burst is cut after this time: errors are taken to be shared no longer."""
+
 
 class Context(Protocol):
     """What the builder knows when blocks are made."""
@@ -107,15 +111,22 @@ def attach(context: Context, robot: int, t_s: Floats) -> tuple[Ints, Floats, Boo
     return index, step, reached
 
 
-def bursts(sensor: Ints, target: Ints, t_s: Floats, gap_s: float) -> Ints:
-    """Burst number (n,) of rows: one sensor, one target, no pause longer than ``gap_s``."""
+def bursts(sensor: Ints, target: Ints, t_s: Floats, gap_s: float, window_s: float) -> Ints:
+    """Burst number (n,) of rows: one sensor, one target, no pause longer than ``gap_s``, no longer
+    in all than ``window_s``."""
     order = np.lexsort((t_s, target, sensor))
     new = np.ones(len(order), dtype=bool)
     if len(order) > 1:
         same = (np.diff(sensor[order]) == 0) & (np.diff(target[order]) == 0)
         new[1:] = ~(same & (np.diff(t_s[order]) <= gap_s))
+    run = np.cumsum(new) - 1
+    begin = t_s[order][new] if len(order) else t_s
+    part = np.floor((t_s[order] - begin[run]) / window_s).astype(np.int64)
+    cut = np.ones(len(order), dtype=bool)
+    if len(order) > 1:
+        cut[1:] = (np.diff(run) != 0) | (np.diff(part) != 0)
     out = np.empty(len(order), dtype=np.int64)
-    out[order] = np.cumsum(new) - 1
+    out[order] = np.cumsum(cut) - 1
     return out
 
 
@@ -129,7 +140,8 @@ def observation_blocks(
     group = frames.group(survey.dimension)
     t_s = context.times(robot, table)
     a, step, reached = attach(context, robot, t_s)
-    burst = bursts(table.sensor, table.target, t_s, context.settings.burst_gap_s)
+    gap, window = context.settings.burst_gap_s, context.settings.burst_window_s
+    burst = bursts(table.sensor, table.target, t_s, gap, window)
     mounts = np.stack([group.from_rows(log.sensors[s].body_T_sensor) for s in table.sensors])
     frame_a = group.compose(step, mounts[table.sensor])
     frame_b = np.broadcast_to(group.identity(1), (len(t_s), *group.shape)).copy()

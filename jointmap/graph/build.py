@@ -31,13 +31,15 @@ class BuildSettings:
     ``merge_s``: instants this close share a keyframe (their rows are moved to it by odometry).
     ``spacing_s``: neighbouring keyframes are never further apart. ``max_gap_s``: longer stretches
     without odometry rows become weak factors (None: from the log's own rate). ``burst_gap_s``:
-    sightings of one target by one sensor that follow each other within it are one burst.
+    sightings of one target by one sensor that follow each other within it are one burst, which
+    ends after ``burst_window_s`` at the latest: rows of a burst share a part of their error.
     """
 
     merge_s: float = 1e-3
     spacing_s: float = 5.0
     max_gap_s: float | None = None
     burst_gap_s: float = 3.0
+    burst_window_s: float = 10.0
 
 
 def build_problem(

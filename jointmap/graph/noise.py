@@ -5,6 +5,13 @@ The covariance of a residual row is a sum of known shapes scaled by squared term
 (``per_m``); for an odometry increment the five accumulated shapes of
 :data:`jointmap.graph.problem.ODOMETRY_TERMS`. What the log states row by row replaces the sum.
 Terms are data, never constants in the code: each says where its value came from.
+
+Sightings come in bursts: rows of one robot, sensor and target within seconds share most of their
+error, and n of them are worth far less than n. With a white variance ``s^2`` and a variance ``c^2``
+that the rows of a burst have in common, the mean of n rows has the variance ``s^2 / n + c^2``. The
+same weight is had with independent rows of variance ``s^2 + n c^2``: that is what a solve uses (an
+effective sample size, n_eff = n / (1 + (n - 1) rho) with rho = c^2 / (s^2 + c^2); Kish 1965). A
+single row by itself has ``s^2 + c^2``, and is gated by that (``single=True``).
 """
 
 from __future__ import annotations
@@ -26,9 +33,9 @@ Origin = Literal["given", "edited", "default", "estimated"]
 #: Standard deviations assumed until the data say better (common practice, no source): metres and
 #: radians for ``constant``, per metre for ``per_m``, per square root of the unit for odometry.
 DEFAULT_SIGMA: Mapping[str, float] = {
-    "bearing_rad": 0.03,
-    "elevation_rad": 0.03,
-    "range_m": 0.15,
+    "bearing_rad": 0.02,
+    "elevation_rad": 0.02,
+    "range_m": 0.1,
     "x_m": 0.15,
     "y_m": 0.15,
     "z_m": 0.15,
@@ -42,6 +49,8 @@ DEFAULT_SIGMA: Mapping[str, float] = {
     "rotation_per_sqrt_s": 0.003,
     "tilt_rad": 0.02,
 }
+#: Kinds whose rows come in bursts with a common error.
+BURSTY = ("sighting", "encounter")
 #: Smallest value an estimate may shrink to, as a share of the default.
 FLOOR_SHARE = 1e-3
 
@@ -145,26 +154,52 @@ def initial_noise(survey: Survey, problem: Problem) -> Noise:
             given_map = {} if tilt is None else {"tilt_rad": tilt}
         sensor = block.sensor or block.kind
         for name in dict.fromkeys(residual_names(block, problem.dimension)):
-            given = given_map.get(name, nan)
-            edited = edits.get((robot, block.sensor, name), nan)
             default = DEFAULT_SIGMA[name] if block.kind != "fix" else 1.0
-            if name == "range_m":
-                per_m = given_map.get("range_per_m", nan)
-                if np.isfinite(given) != np.isfinite(per_m):
-                    given, per_m = np.nan_to_num([given, per_m])
-                terms.append(
-                    _term(
-                        robot,
-                        sensor,
-                        name,
-                        "per_m",
-                        per_m,
-                        edits.get((robot, block.sensor, "range_per_m"), nan),
-                        0.01,
-                    )
-                )
-            terms.append(_term(robot, sensor, name, "constant", given, edited, default))
+            stated = _stated(given_map, edits, robot, block.sensor, name)
+            for term, share in _terms_of(block, name):
+                given, edited = stated.get(term, (nan, nan))
+                terms.append(_term(robot, sensor, name, term, given, edited, share * default))
     return Noise({t.key: t for t in terms})
+
+
+def _terms_of(block: Block, name: str) -> list[tuple[str, float]]:
+    """Terms of a component, with their defaults as shares of the component's."""
+    terms = [("constant", 1.0)]
+    if name == "range_m":
+        terms.append(("per_m", 0.1))
+    if block.kind in BURSTY:
+        terms.append(("correlated", 0.5))
+        if name == "range_m":
+            terms.append(("correlated_per_m", 0.1))
+    return terms
+
+
+def _stated(
+    given_map: Mapping[str, float],
+    edits: Mapping[tuple[str, str, str], float],
+    robot: str,
+    sensor: str,
+    name: str,
+) -> dict[str, tuple[float, float]]:
+    """(given, edited) by term; stating one term of a component states its whole model."""
+    nan = float("nan")
+    names = {"constant": name, "per_m": name.replace("_m", "_per_m")}
+    out = {
+        term: (given_map.get(full, nan), edits.get((robot, sensor, full), nan))
+        for term, full in names.items()
+    }
+    for side in (0, 1):
+        if any(np.isfinite(pair[side]) for pair in out.values()):
+            for term in ("constant", "per_m", "correlated", "correlated_per_m"):
+                pair = list(out.get(term, (nan, nan)))
+                pair[side] = pair[side] if np.isfinite(pair[side]) else 0.0
+                out[term] = (pair[0], pair[1])
+    return out
+
+
+def burst_size(block: Block) -> Floats:
+    """Number (n,) of rows in each row's burst."""
+    return np.asarray(np.bincount(block.burst)[block.burst], dtype=np.float64)
 
 
 def observed_range(block: Block) -> Floats:
@@ -175,9 +210,13 @@ def observed_range(block: Block) -> Floats:
 
 
 def term_shapes(
-    block: Block, problem: Problem, noise: Noise
+    block: Block, problem: Problem, noise: Noise, *, single: bool = False
 ) -> tuple[list[NoiseTerm], Floats, Floats]:
     """The terms of a block, their shapes, and what the rows state by themselves.
+
+    Parameters
+    ----------
+    single : each row by itself, not weakened by the others of its burst
 
     Returns
     -------
@@ -208,12 +247,14 @@ def term_shapes(
     terms, layers = [], []
     for name in dict.fromkeys(names):
         rows = np.array([n == name for n in names])
-        for term in ("constant", "per_m"):
+        for term in ("constant", "per_m", "correlated", "correlated_per_m"):
             found = noise.terms.get((robot, sensor, name, term))
             if found is None:
                 continue
             layer = np.zeros((block.n, m, m))
-            size = observed_range(block) ** 2 if term == "per_m" else np.ones(block.n)
+            size = observed_range(block) ** 2 if term.endswith("per_m") else np.ones(block.n)
+            if term.startswith("correlated") and not single:
+                size = size * burst_size(block)
             layer[:, index[rows], index[rows]] = size[:, None] * free[:, rows]
             terms.append(found)
             layers.append(layer)
@@ -225,9 +266,11 @@ def residual_size(block: Block, dimension: int) -> int:
     return len(residual_names(block, dimension))
 
 
-def block_covariance(block: Block, problem: Problem, noise: Noise) -> Floats:
+def block_covariance(
+    block: Block, problem: Problem, noise: Noise, *, single: bool = False
+) -> Floats:
     """Covariance (n, m, m) of a block's residuals under the noise in force."""
-    terms, shapes, stated = term_shapes(block, problem, noise)
+    terms, shapes, stated = term_shapes(block, problem, noise, single=single)
     theta2 = np.array([t.value for t in terms]) ** 2
     return stated + np.tensordot(theta2, shapes, axes=1)
 

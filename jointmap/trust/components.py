@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 from scipy.stats import chi2
 
 from jointmap.graph.noise import (
+    BURSTY,
     DEFAULT_SIGMA,
     FLOOR_SHARE,
     Noise,
@@ -29,6 +30,7 @@ from jointmap.graph.noise import (
 )
 from jointmap.graph.problem import Problem
 from jointmap.solve.system import Part, System
+from jointmap.trust.bursts import update_bursts
 from jointmap.trust.quality import PartQuality, Quality
 
 Floats = NDArray[np.float64]
@@ -72,10 +74,12 @@ def update_noise(
     """
     if first:
         return _scaled_by_median(problem, noise, system, quality), LARGEST_STEP
+    noise, burst_change = update_bursts(problem, noise, system, quality)
     sums: dict[tuple[str, str, str, str], _Sum] = {}
     for part, stats in zip(system.parts, quality.parts, strict=True):
-        _add(sums, problem, noise, part, stats)
-    changed, largest = [], 1.0
+        if part.block.kind not in BURSTY:
+            _add(sums, problem, noise, part, stats)
+    changed, largest = [], burst_change
     for key, total in sums.items():
         if total.redundancy < LEAST_REDUNDANCY or total.expected <= 0.0:
             continue
