@@ -22,7 +22,7 @@ class SurveyFiles:
     def locate(self, name: str, asked_by: str, key: str) -> Path | None:
         """Absolute path of a file named in the survey, ``None`` (and a problem) when unusable.
 
-        The name must be relative, must not climb out of the folder by ``..`` and must not lead
+        ``asked_by`` and ``key`` say where it is named. The name must be relative, must not climb out of the folder by ``..`` and must not lead
         out of it through a symbolic link.
         """
         if not self._inside(name):
@@ -30,12 +30,14 @@ class SurveyFiles:
                 asked_by,
                 f"{name!r} leads out of the survey folder",
                 "put the file into the survey folder and name it relative to survey.toml",
-                column=key,
+                column=key or None,
             )
             return None
         path = self.folder / name
         if not path.is_file():
-            self.problems.add(asked_by, f"{name!r} is missing", self._hint(name), column=key)
+            self.problems.add(
+                asked_by, f"{name!r} is missing", self._hint(name), column=key or None
+            )
             return None
         return path
 

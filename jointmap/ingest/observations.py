@@ -53,7 +53,7 @@ def read_observations(
     table = sort_by_time(table, problems)
     table = _drop_blind(table, dimension, problems)
     sensor, target, targets = _names(table, target_column, me, config, problems)
-    contents = [sensor, target, *table.numbers.values()]
+    contents = [sensor, target, *(v for k, v in table.numbers.items() if k != "t_s")]
     keep = drop_copies(table, contents, table.number("t_s"), problems)
     if not keep.all():
         table, sensor, target = table.take(keep), sensor[keep], target[keep]

@@ -42,6 +42,7 @@ def test_no_folder(tmp_path: Path) -> None:
 def test_no_survey_toml(tmp_path: Path) -> None:
     problem = one_refused(tmp_path)
     assert (problem.path, problem.message) == ("survey.toml", "'survey.toml' is missing")
+    assert problem.column is None
 
 
 def test_missing_file_names_the_close_one(tmp_path: Path) -> None:
