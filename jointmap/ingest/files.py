@@ -22,8 +22,8 @@ class SurveyFiles:
     def locate(self, name: str, asked_by: str, key: str) -> Path | None:
         """Absolute path of a file named in the survey, ``None`` (and a problem) when unusable.
 
-        ``asked_by`` and ``key`` say where it is named. The name must be relative, must not climb out of the folder by ``..`` and must not lead
-        out of it through a symbolic link.
+        ``asked_by`` and ``key`` say where it is named. The name must be relative, must not climb
+        out of the folder by ``..`` and must not lead out of it through a symbolic link.
         """
         if not self._inside(name):
             self.problems.add(
