@@ -96,13 +96,13 @@ class Settings:
     keyframe_merge_s: float = 1e-3
     gap_s: float | None = None
     burst_gap_s: float = 3.0
-    burst_window_s: float = 10.0
-    gate_measurement: float = 0.999
+    burst_window_s: float = 2.0
+    gate_measurement: float = 0.99
     gate_association: float = 0.999
     noise: NoiseMode = "estimated"
     calibrate: bool = True
     holdout_folds: int = 5
-    max_rounds: int = 8
+    max_rounds: int = 12
     max_iterations: int = 100
     seed: int = 0
     workers: int = 0

@@ -363,12 +363,12 @@ def closure_blocks(context: Context, table: Closures) -> Made:
     return made
 
 
-def control_block(control: ControlPoints, tracks: Tracks, shape: tuple[int, ...]) -> Block:
+def control_block(control: ControlPoints, tracks: Tracks, dimension: int) -> Block:
     """Surveyed coordinates of landmarks."""
+    group = frames.group(dimension)
     ids = {name: i for i, name in enumerate(tracks.landmarks)}
     n = len(control.landmarks)
     dim = control.position.shape[1]
-    nothing = np.zeros((1, *shape))
     return Block(
         kind="control",
         robot=-1,
@@ -377,8 +377,8 @@ def control_block(control: ControlPoints, tracks: Tracks, shape: tuple[int, ...]
         a=np.full(n, -1),
         b=np.array([ids[name] for name in control.landmarks], dtype=np.int64),
         obs=control.position,
-        frame_a=nothing,
-        frame_b=nothing,
+        frame_a=group.identity(1),
+        frame_b=group.identity(1),
         sigma=control.sigma,
         covariance=None,
         odometry_basis=None,

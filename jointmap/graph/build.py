@@ -39,7 +39,7 @@ class BuildSettings:
     spacing_s: float = 5.0
     max_gap_s: float | None = None
     burst_gap_s: float = 3.0
-    burst_window_s: float = 10.0
+    burst_window_s: float = 2.0
 
 
 def build_problem(
@@ -65,7 +65,6 @@ def build_problem(
     values = {**(calibration or {}), **fixed_values(survey, "calibration")}
     context = _Context.of(survey, settings, values)
     keyframes = context.keyframes
-    group = frames.group(survey.dimension)
     tracks = TrackTable(survey)
     all_blocks: list[Block] = []
     unusable: list[Unusable] = []
@@ -98,7 +97,7 @@ def build_problem(
         unusable += made_rows.unusable
     frozen = tracks.freeze()
     if survey.control_points is not None and len(survey.control_points.landmarks):
-        all_blocks.append(make.control_block(survey.control_points, frozen, group.shape))
+        all_blocks.append(make.control_block(survey.control_points, frozen, survey.dimension))
     return Problem(
         dimension=survey.dimension,
         gravity_aligned=survey.gravity_aligned,

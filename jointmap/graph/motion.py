@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from jointmap import frames
 from jointmap.graph.clock import SurveyClock
 from jointmap.graph.noise import DEFAULT_SIGMA
 from jointmap.graph.odometry import dead_reckon, increments
@@ -99,8 +100,7 @@ def odometry_blocks(
     source = motion.odometry.source
     dof = covariance.shape[-1]
     n = len(keep)
-    shape = poses.shape[1:]
-    nothing = np.zeros((1, *shape))
+    nothing = frames.group(survey.dimension).identity(1)
     block = Block(
         kind="odometry",
         robot=robot,

@@ -94,7 +94,7 @@ def order(graph: LinearGraph, last: Ints) -> gtsam.Ordering:
 
 
 def eliminate(graph: LinearGraph, ordering: gtsam.Ordering) -> gtsam.GaussianBayesTree:
-    """Multifrontal Cholesky.
+    """Multifrontal Cholesky, QR where Cholesky gives up.
 
     Raises
     ------
@@ -103,6 +103,12 @@ def eliminate(graph: LinearGraph, ordering: gtsam.Ordering) -> gtsam.GaussianBay
     """
     try:
         return graph.graph.eliminateMultifrontal(ordering)
+    except RuntimeError:
+        # GTSAM's Cholesky also refuses determined systems whose last two pivots of a clique
+        # differ by more than 2^12; QR has the last word.
+        pass
+    try:
+        return graph.graph.eliminateMultifrontal(ordering, gtsam.EliminateQR)
     except RuntimeError as error:
         raise IndeterminateError(str(error)) from error
 

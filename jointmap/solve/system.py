@@ -125,7 +125,8 @@ def make_system(
     calibrated[list(sensitivity)] = True
     layout = make_layout(problem, assignment, used, calibrated, links)
     tied = Links(links, assignment.landmark[links], problem.tracks.claim[links], link_sigma)
-    parts = []
+    oriented = oriented_landmarks(problem, assignment)
+    parts: list[Part] = []
     for at, (block, rows, w, kernel) in enumerate(
         zip(problem.blocks, used, whiten, kernels, strict=True)
     ):
@@ -134,14 +135,8 @@ def make_system(
         if block.kind in ("sighting", "control"):
             landmark = landmark_of_rows(block, assignment)
             keep = rows & (layout.key_of_landmark[landmark] >= 0)
-        if not keep.any():
-            continue
-        index = np.flatnonzero(keep)
-        whole = len(index) == block.n
-        sub = block if whole else take_rows(block, index)
-        landmark = None if landmark is None else landmark[index]
-        key_b = sub.b if landmark is None else layout.key_of_landmark[landmark]
-        parts.append(Part(at, sub, index, w if whole else w[index], kernel, sub.a, key_b, landmark))
+        for index in _uniform(keep, landmark, oriented):
+            parts.append(_part(at, block, index, w, kernel, landmark, layout))
     pairs = [(p.key_a, p.key_b) for p in parts if p.block.kind not in ("fix", "gravity", "control")]
     pairs.append((layout.key_of_landmark[tied.own], layout.key_of_landmark[tied.shared]))
     n_tied = layout.n - int(calibrated.sum())
@@ -149,7 +144,7 @@ def make_system(
         problem,
         assignment,
         layout,
-        oriented_landmarks(problem, assignment),
+        oriented,
         tuple(parts),
         components(n_tied, pairs),
         tied,
@@ -157,6 +152,31 @@ def make_system(
         np.zeros((len(problem.robots), 3)) if calibration_offset is None else calibration_offset,
         np.ones((len(problem.robots), 3)) if calibration_prior is None else calibration_prior,
     )
+
+
+def _uniform(keep: Bools, landmark: Ints | None, oriented: Bools) -> list[Ints]:
+    """Used rows, apart by whether their landmark is a pose: a part has one shape of Jacobian."""
+    if landmark is None:
+        return [np.flatnonzero(keep)] if keep.any() else []
+    poses = oriented[landmark]
+    return [np.flatnonzero(g) for g in (keep & ~poses, keep & poses) if g.any()]
+
+
+def _part(
+    at: int,
+    block: Block,
+    index: Ints,
+    whiten: Floats,
+    kernel: Kernel | None,
+    landmark: Ints | None,
+    layout: Layout,
+) -> Part:
+    whole = len(index) == block.n
+    sub = block if whole else take_rows(block, index)
+    landmark = None if landmark is None else landmark[index]
+    key_b = sub.b if landmark is None else layout.key_of_landmark[landmark]
+    whiten = whiten if whole else whiten[index]
+    return Part(at, sub, index, whiten, kernel, sub.a, key_b, landmark)
 
 
 def linearise(system: System, part: Part, state: State, *, jacobians: bool = True) -> Linearised:

@@ -48,12 +48,17 @@ _SHARED = ("correlated", "correlated_per_m")
 
 @dataclass
 class Sides:
-    """The two sides of the moment equation of one term, and the redundancy behind it."""
+    """The two sides of the moment equation of one term.
+
+    ``redundancy`` is the share of the residuals' redundancy that the term answers for, ``support``
+    all of the redundancy in which it takes part.
+    """
 
     term: NoiseTerm
     seen: float = 0.0
     expected: float = 0.0
     redundancy: float = 0.0
+    support: float = 0.0
 
 
 def burst_moments(
@@ -132,6 +137,7 @@ def _white_part(
         sides.seen += float((z2[inside] * score).sum()) / factor
         sides.expected += float((share[inside] * score).sum())
         sides.redundancy += term.value**2 * float((share[inside] * score).sum())
+        sides.support += float(share[inside].sum())
 
 
 def _shared_part(
@@ -163,6 +169,7 @@ def _shared_part(
         sides.seen += float((z2[inside] * score).sum()) / factor
         sides.expected += float((left[inside] * score).sum())
         sides.redundancy += term.value**2 * float((left[inside] * score).sum())
+        sides.support += float(left[inside].sum())
 
 
 def _median(values: Floats, group: Ints) -> Floats:
@@ -175,28 +182,31 @@ def _median(values: Floats, group: Ints) -> Floats:
 
 
 def moved(sides: Sides, default: float) -> tuple[NoiseTerm, float] | None:
-    """A term after one update and its ratio of change; None where the data cannot tell."""
-    if sides.redundancy < 0.0 or sides.expected <= 0.0:
+    """A term after one update and its ratio of change; None where the data cannot tell.
+
+    A change within half of the estimate's own standard deviation counts as none, and so does one
+    of a term that answers for less than ten residuals.
+    """
+    if sides.support < LEAST_REDUNDANCY or sides.expected <= 0.0:
         return None
     ratio = float(np.sqrt(max(sides.seen, 1e-12) / sides.expected))
     ratio = float(np.clip(ratio, 1 / LARGEST_STEP, LARGEST_STEP))
     floor = FLOOR_SHARE * default
     value = max(sides.term.value * ratio, floor)
     sigma = value / np.sqrt(2.0 * max(sides.redundancy, 1.0))
-    settled = value <= 3 * floor or sides.redundancy < LEAST_REDUNDANCY
+    idle = value <= 3 * floor or sides.redundancy < LEAST_REDUNDANCY
+    settled = idle or abs(value - sides.term.value) < 0.5 * sigma
     return (
         with_value(sides.term, value, sigma, sides.redundancy),
         1.0 if settled else max(ratio, 1 / ratio),
     )
 
 
-def update_bursts(
-    problem: Problem, noise: Noise, system: System, quality: Quality
-) -> tuple[Noise, float]:
-    """One update of the terms of all bursty kinds; the largest ratio of change."""
+def solved(sums: dict[TermKey, Sides], noise: Noise) -> tuple[Noise, float]:
+    """Noise after one update of every term in ``sums``, and the largest ratio of change."""
     changed, largest = [], 1.0
-    for key, sides in burst_moments(problem, noise, system, quality).items():
-        made = moved(sides, DEFAULT_SIGMA.get(key[2], 1.0))
+    for key, sides in sums.items():
+        made = moved(sides, DEFAULT_SIGMA.get(key[3] if key[2] == "odometry" else key[2], 1.0))
         if made is not None:
             changed.append(made[0])
             largest = max(largest, made[1])

@@ -13,48 +13,28 @@ by the truncation factor of the chi-square distribution (F_{d+2}(g) / F_d(g)).
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 from numpy.typing import NDArray
 from scipy.stats import chi2
 
 from jointmap.graph.noise import (
     BURSTY,
-    DEFAULT_SIGMA,
-    FLOOR_SHARE,
     Noise,
     NoiseTerm,
+    TermKey,
     term_shapes,
     with_value,
 )
 from jointmap.graph.problem import Problem
 from jointmap.solve.system import Part, System
-from jointmap.trust.bursts import update_bursts
+from jointmap.trust.bursts import GATE, Sides, burst_moments, solved
 from jointmap.trust.quality import PartQuality, Quality
+from jointmap.trust.variance import LEAST_REDUNDANCY, truncation_factor
 
 Floats = NDArray[np.float64]
 
-#: Below this redundancy a term keeps its prior (CHECKS 2c: the band of s^2 is then 0.3 to 2).
-LEAST_REDUNDANCY = 10.0
-#: Share of good measurements that the gate lets pass.
-GATE = 0.99
 #: One update changes a sigma by at most this factor.
 LARGEST_STEP = 4.0
-
-
-@dataclass
-class _Sum:
-    term: NoiseTerm
-    seen: float = 0.0
-    expected: float = 0.0
-    redundancy: float = 0.0
-
-
-def truncation_factor(dof: Floats, gate: float = GATE) -> Floats:
-    """Second moment of a gated Gaussian residual over that of an ungated one (CHECKS D4)."""
-    limit = chi2.ppf(gate, np.maximum(dof, 1))
-    return np.asarray(chi2.cdf(limit, np.maximum(dof, 1) + 2) / gate)
 
 
 def update_noise(
@@ -70,27 +50,15 @@ def update_noise(
     Returns
     -------
     noise : with the new values; terms with too little redundancy keep theirs
-    change : largest ratio of change of a sigma that is well determined
+    change : largest ratio of change that exceeds half of a sigma's own standard deviation
     """
     if first:
         return _scaled_by_median(problem, noise, system, quality), LARGEST_STEP
-    noise, burst_change = update_bursts(problem, noise, system, quality)
-    sums: dict[tuple[str, str, str, str], _Sum] = {}
+    sums = burst_moments(problem, noise, system, quality)
     for part, stats in zip(system.parts, quality.parts, strict=True):
         if part.block.kind not in BURSTY:
             _add(sums, problem, noise, part, stats)
-    changed, largest = [], burst_change
-    for key, total in sums.items():
-        if total.redundancy < LEAST_REDUNDANCY or total.expected <= 0.0:
-            continue
-        ratio = float(np.clip(np.sqrt(total.seen / total.expected), 1 / LARGEST_STEP, LARGEST_STEP))
-        floor = FLOOR_SHARE * DEFAULT_SIGMA.get(key[3] if key[2] == "odometry" else key[2], 1.0)
-        value = max(total.term.value * ratio, floor)
-        if value > 3 * floor:
-            largest = max(largest, ratio, 1 / ratio)
-        sigma = value / np.sqrt(2.0 * total.redundancy)
-        changed.append(with_value(total.term, value, sigma, total.redundancy))
-    return noise.updated(changed), largest
+    return solved(sums, noise)
 
 
 def _scaled_by_median(problem: Problem, noise: Noise, system: System, quality: Quality) -> Noise:
@@ -103,7 +71,7 @@ def _scaled_by_median(problem: Problem, noise: Noise, system: System, quality: Q
             continue
         ratio = float(np.median(t[tested] / chi2.ppf(0.5, dof[tested])))
         for term in term_shapes(part.block, problem, noise)[0]:
-            if term.free:
+            if term.free and not term.term.startswith("correlated"):
                 terms[term.key] = term
                 ratios.setdefault(term.key, []).append((ratio, int(tested.sum())))
     changed = []
@@ -116,7 +84,7 @@ def _scaled_by_median(problem: Problem, noise: Noise, system: System, quality: Q
 
 
 def _add(
-    sums: dict[tuple[str, str, str, str], _Sum],
+    sums: dict[TermKey, Sides],
     problem: Problem,
     noise: Noise,
     part: Part,
@@ -128,7 +96,8 @@ def _add(
         return
     t, dof = stats.statistic()
     inside = (dof > 0) & (t <= chi2.ppf(GATE, np.maximum(dof, 1)))
-    factor = truncation_factor(dof)
+    factor = truncation_factor(np.maximum(dof, 1), GATE)
+    left = float(np.trace(stats.redundancy[inside], axis1=1, axis2=2).sum())
     w = part.whiten
     for term, shape in zip(terms, shapes, strict=True):
         if not term.free:
@@ -137,8 +106,9 @@ def _add(
         seen = np.einsum("ni,nij,nj->n", stats.whitened, s, stats.whitened) / factor
         # A row's share in the term: how much of its variance the term makes, times its redundancy.
         expected = np.einsum("nij,nji->n", stats.redundancy, s)
-        total = sums.setdefault(term.key, _Sum(term))
+        total = sums.setdefault(term.key, Sides(term))
         total.seen += float(seen[inside].sum())
         total.expected += float(expected[inside].sum())
         total.redundancy += term.value**2 * float(expected[inside].sum())
+        total.support += left
 
