@@ -24,7 +24,7 @@ from jointmap.progress import Progress
 from jointmap.settings import Settings, environment_versions
 from jointmap.solve.layout import n_landmarks
 from jointmap.trust.checked import judge_trust
-from jointmap.trust.frame import Expressed, express
+from jointmap.trust.frame import Expressed, express, position_sigma
 from jointmap.trust.outcome import Outcome
 
 #: Version of the layout of reference.json.
@@ -40,6 +40,8 @@ def assemble(outcome: Outcome, settings: Settings, progress: Progress) -> Refere
     expressed = express(
         problem, outcome.system, outcome.state, outcome.quality, trust, kind, robot
     )
+    sigma = position_sigma(expressed.pose_cov, problem.dimension)
+    trust = judge_trust(problem, outcome.system, outcome.quality, n_landmarks(problem), sigma)
     paths = trajectories(outcome, expressed, trust, settings.gap_s)
     robots = robot_table(outcome, expressed, paths)
     measurements = measurement_table(outcome)

@@ -1,9 +1,11 @@
-"""Trust of every stretch of trajectory and every landmark, from redundancy.
+"""Trust of every stretch of trajectory and every landmark.
 
-Odometry between two instants at which something else checks the robot is itself checked by as much
-as its redundancy over the stretch; what lies outside the first and last such instant is dead
-reckoning and is called ``unchecked``. Thresholds are those of CHECKS 2d: redundancy below 0.1 is
-weak, below 0.01 unchecked.
+What lies outside a robot's first and last observation that the other data check is dead reckoning,
+and is called ``unchecked``. Between two such observations the trajectory is held from both sides;
+it is ``weak`` where odometry alone carries it so far that its drift exceeds twice the sigma that
+the robot's observed poses usually have, or where for a while everything rests on one single
+landmark, whose error or wrong label nothing would reveal. An observation or a landmark counts as
+checked by its redundancy: below 0.1 it is weak, below 0.01 unchecked (CHECKS 2d).
 """
 
 from __future__ import annotations
@@ -14,14 +16,19 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap.graph.problem import Problem
-from jointmap.solve.system import System
+from jointmap.solve.system import Part, System
 from jointmap.trust.quality import Quality
 from jointmap.trust.redundancy import UNCHECKED, WEAK
 
 Ints = NDArray[np.int64]
 Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
 
 CHECKED_CODE, WEAK_CODE, UNCHECKED_CODE = 0, 1, 2
+#: A stretch is weak when odometry alone drifts by more than this many usual sigmas over it.
+DRIFT_RATIO = 2.0
+#: Seeing one single target for longer than this on either side is resting on it alone.
+WHILE_S = 20.0
 _EXTERNAL = ("sighting", "encounter", "fix", "closure")
 
 
@@ -40,45 +47,101 @@ class Trust:
     keyframes_seeing: Ints
 
 
-def judge_trust(problem: Problem, system: System, quality: Quality, n_landmarks: int) -> Trust:
-    """Trust codes of a finished solve."""
+def judge_trust(
+    problem: Problem,
+    system: System,
+    quality: Quality,
+    n_landmarks: int,
+    sigma: Floats | None = None,
+) -> Trust:
+    """Trust codes of a finished solve.
+
+    Parameters
+    ----------
+    sigma : (K,) claimed standard deviation of each keyframe's position in its worst direction, in
+        the datum of the result; None (the datum is still to be chosen): drift is not judged
+    """
     k = len(problem.keyframes.t_s)
-    anchored = np.zeros(k, dtype=bool)
-    odometry = np.zeros(k)
+    sigma = np.full(k, np.inf) if sigma is None else sigma
+    drift2 = np.full(k, np.inf)
+    events: list[tuple[Ints, Ints]] = []
     for part, stats in zip(system.parts, quality.parts, strict=True):
-        redundancy = stats.numbers
-        if part.block.kind == "odometry":
-            # The least checked direction of an increment decides, not their mean.
-            odometry[part.key_a] = redundancy.min(axis=1)
-        elif part.block.kind in _EXTERNAL:
-            good = redundancy.max(axis=1) > WEAK
-            anchored[part.key_a[good]] = True
-            if part.block.kind in ("encounter", "closure"):
-                anchored[part.key_b[good]] = True
+        block = part.block
+        if block.kind == "odometry":
+            inverse = np.linalg.inv(part.whiten)
+            place = slice(0, 2) if problem.dimension == 2 else slice(3, 6)
+            covariance = (inverse @ np.swapaxes(inverse, 1, 2))[:, place, place]
+            drift2[part.key_a] = np.linalg.eigvalsh(covariance)[:, -1]
+        elif block.kind in _EXTERNAL:
+            good = stats.numbers.max(axis=1) > WEAK
+            target = _target(part)
+            events.append((part.key_a[good], target[good]))
+            if block.kind in ("encounter", "closure"):
+                events.append((part.key_b[good], -1 - part.key_a[good]))
     keyframe = np.full(k, UNCHECKED_CODE, dtype=np.int64)
     interval = np.full(k, UNCHECKED_CODE, dtype=np.int64)
+    at = np.concatenate([e[0] for e in events] or [np.zeros(0, np.int64)])
+    target = np.concatenate([e[1] for e in events] or [np.zeros(0, np.int64)])
+    order = np.lexsort((target, at))
+    at, target = at[order], target[order]
     for r in range(len(problem.robots)):
         lo, hi = problem.keyframes.first[r], problem.keyframes.first[r + 1]
-        keyframe[lo:hi], interval[lo:hi] = _stretches(anchored[lo:hi], odometry[lo:hi])
+        mine = slice(*np.searchsorted(at, [lo, hi]))
+        keyframe[lo:hi], interval[lo:hi] = _stretches(
+            problem.keyframes.t_s[lo:hi], at[mine] - lo, target[mine], drift2[lo:hi], sigma[lo:hi]
+        )
     landmark, seeing = _landmarks(system, quality, keyframe, n_landmarks)
     return Trust(keyframe, interval, landmark, seeing)
 
 
-def _stretches(anchored: NDArray[np.bool_], redundancy: Floats) -> tuple[Ints, Ints]:
-    n = len(anchored)
-    at = np.flatnonzero(anchored)
+def _target(part: Part) -> Ints:
+    """A number for what each row looked at; fixes and closures are never the same thing twice."""
+    if part.landmark is not None:
+        return part.landmark
+    if part.block.kind == "encounter":
+        return -1 - part.key_b
+    return -1 - np.arange(len(part.index)) - (1 << 40)
+
+
+def _stretches(t_s: Floats, at: Ints, target: Ints, drift2: Floats, sigma: Floats) -> tuple[Ints, Ints]:
+    """Codes (k,) of one robot's keyframes and of the stretch behind each.
+
+    ``at`` (e,) keyframe of each checked observation, in order; ``target`` (e,) what it looked at.
+    """
+    n = len(t_s)
     keyframe = np.full(n, UNCHECKED_CODE, dtype=np.int64)
     interval = np.full(n, UNCHECKED_CODE, dtype=np.int64)
     if not len(at):
         return keyframe, interval
-    total = np.add.reduceat(redundancy, at)
-    code = np.where(total > WEAK, CHECKED_CODE, np.where(total > UNCHECKED, WEAK_CODE, UNCHECKED_CODE))
-    which = np.searchsorted(at, np.arange(n), side="right") - 1
-    inside = (which >= 0) & (which < len(at) - 1)
+    anchors = np.unique(at)
+    drift = np.sqrt(np.add.reduceat(drift2, anchors))
+    far = drift > DRIFT_RATIO * float(np.median(sigma[anchors]))
+    alone = _alone(t_s, at, target, anchors)
+    lonely = alone.copy()
+    lonely[:-1] = alone[:-1] & alone[1:]
+    code = np.where(far | lonely, WEAK_CODE, CHECKED_CODE)
+    which = np.searchsorted(anchors, np.arange(n), side="right") - 1
+    inside = (which >= 0) & (which < len(anchors) - 1)
     interval[inside] = code[which[inside]]
     keyframe[inside] = interval[inside]
-    keyframe[at] = CHECKED_CODE
+    keyframe[anchors] = np.where(alone, WEAK_CODE, CHECKED_CODE)
     return keyframe, interval
+
+
+def _alone(t_s: Floats, at: Ints, target: Ints, anchors: Ints) -> Bools:
+    """Anchors (a,) around which, within a while, nothing but one target is seen."""
+    stamp = t_s[at]
+    change = np.flatnonzero(np.diff(target)) + 1
+    before = np.searchsorted(change, np.arange(len(at)), side="right") - 1
+    last_other = np.where(before >= 0, stamp[change[np.maximum(before, 0)] - 1], -np.inf)
+    after = before + 1
+    more = after < len(change)
+    index = np.minimum(after, max(len(change) - 1, 0))
+    next_other = np.where(more, stamp[change[index]] if len(change) else np.inf, np.inf)
+    single = (stamp - last_other > WHILE_S) & (next_other - stamp > WHILE_S)
+    out = np.ones(len(t_s), dtype=bool)
+    np.logical_and.at(out, at, single)
+    return out[anchors]
 
 
 def _landmarks(

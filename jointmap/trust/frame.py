@@ -234,3 +234,9 @@ def _landmark_covariance(
             blocks = turn @ blocks @ np.swapaxes(turn, 1, 2)
         out[index[rows], :d, :d] = blocks
     return out
+
+
+def position_sigma(covariance: Floats, dimension: int) -> Floats:
+    """Standard deviation (n,) of position in its worst direction, from body-tangent blocks."""
+    place = slice(0, 2) if dimension == 2 else slice(3, 6)
+    return np.sqrt(np.maximum(np.linalg.eigvalsh(covariance[:, place, place])[:, -1], 0.0))
