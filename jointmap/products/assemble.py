@@ -23,6 +23,7 @@ from jointmap.products.verdict import Judged, judge
 from jointmap.progress import Progress
 from jointmap.settings import Settings, environment_versions
 from jointmap.solve.layout import n_landmarks
+from jointmap.solve.system import link_rows
 from jointmap.trust.checked import judge_trust
 from jointmap.trust.frame import Expressed, express, position_sigma
 from jointmap.trust.outcome import Outcome
@@ -125,7 +126,8 @@ def chi_square(outcome: Outcome) -> tuple[float, int]:
         rows += stats.whitened.size
     if outcome.quality.links is not None:
         total += float((outcome.quality.links.whitened**2).sum())
-        rows += outcome.quality.links.whitened.size
+        tied = link_rows(outcome.system, outcome.state, jacobians=False)
+        rows += sum(group.rhs.size for _, group in tied)
     rows += 3 * int(outcome.calibration.free.sum()) + int(outcome.quality.gauge.free.sum())
     return total, rows - int(outcome.system.layout.dims.sum())
 

@@ -15,6 +15,7 @@ from jointmap.graph.noise import block_covariance, residual_names, whitening
 from jointmap.graph.problem import Block, Problem, Unusable
 from jointmap.products.columns import complete
 from jointmap.solve.decisions import JUMP_WEIGHT
+from jointmap.solve.layout import n_landmarks
 from jointmap.solve.session import own_landmarks
 from jointmap.trust.outcome import Outcome
 from jointmap.trust.redundancy import WEAK, delta0
@@ -123,10 +124,17 @@ def _residuals(outcome: Outcome, block: Block) -> Floats:
         outcome.state.landmarks,
         outcome.state.orientations,
         own_landmarks(outcome.problem).landmark,
-        outcome.system.oriented,
+        _seen_oriented(outcome.problem),
         jacobians=False,
     )
     return lin.residual
+
+
+def _seen_oriented(problem: Problem) -> NDArray[np.bool_]:
+    """Landmarks (L,) that any row, used or not, sees with orientation."""
+    out = np.zeros(n_landmarks(problem), dtype=bool)
+    out[own_landmarks(problem).landmark] = problem.tracks.oriented
+    return out
 
 
 def _table_name(name: str, dimension: int) -> str:

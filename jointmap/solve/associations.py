@@ -89,7 +89,9 @@ def review(tracks: Tracks, accepted: Bools, evidence: Evidence, gate: float) -> 
     scale = _common_scale(evidence, dim)
     statistic = np.full(n, np.nan)
     tested = evidence.dof >= dim
-    statistic[evidence.linked[tested]] = evidence.statistic[tested] / scale
+    # Tags are tested in position and orientation: brought to the scale of a position's gate.
+    fair = limit / chi2.ppf(gate, np.maximum(evidence.dof, 1.0))
+    statistic[evidence.linked[tested]] = (evidence.statistic * fair)[tested] / scale
     out = accepted.copy()
     out[_worst(tracks, statistic, accepted, limit)] = False
     removed = accepted & ~out

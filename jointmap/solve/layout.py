@@ -44,12 +44,26 @@ def n_landmarks(problem: Problem) -> int:
     return len(problem.tracks.landmarks) + len(problem.tracks.robot)
 
 
-def oriented_landmarks(problem: Problem, assignment: Assignment) -> Bools:
-    """Which landmark variables (L,) are poses: those of a track seen with orientation."""
+def oriented_tracks(problem: Problem, used: tuple[Bools, ...]) -> Bools:
+    """Tracks (T,) that a used row sees with orientation."""
+    out = np.zeros(len(problem.tracks.robot), dtype=bool)
+    for block, rows in zip(problem.blocks, used, strict=True):
+        if block.kind == "sighting" and block.components == ("pose",):
+            out[block.b[rows]] = True
+    return out
+
+
+def oriented_landmarks(
+    problem: Problem, assignment: Assignment, tracks: Bools, links: Ints
+) -> Bools:
+    """Which landmark variables (L,) are poses.
+
+    ``tracks`` (T,) are those seen with orientation; a shared landmark is a pose when one of the
+    tracks linked to it is.
+    """
     out = np.zeros(n_landmarks(problem), dtype=bool)
-    np.logical_or.at(out, assignment.landmark, problem.tracks.oriented)
-    claimed = problem.tracks.claim >= 0
-    np.logical_or.at(out, problem.tracks.claim[claimed], problem.tracks.oriented[claimed])
+    np.logical_or.at(out, assignment.landmark, tracks)
+    np.logical_or.at(out, problem.tracks.claim[links], tracks[links])
     return out
 
 
@@ -81,7 +95,8 @@ def make_layout(
     index = np.flatnonzero(active)
     key = np.full(len(active), -1, dtype=np.int64)
     key[index] = k + np.arange(len(index))
-    oriented = oriented_landmarks(problem, assignment)[index]
+    tracks = oriented_tracks(problem, used)
+    oriented = oriented_landmarks(problem, assignment, tracks, links)[index]
     c = np.full(len(problem.robots), -1, dtype=np.int64)
     c[calibrated] = k + len(index) + np.arange(int(calibrated.sum()))
     dims = np.concatenate(

@@ -14,13 +14,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap import frames
-from jointmap.graph.models import Linearised, linearise_block
+from jointmap.graph.models import Linearised, linearise_block, relative_pose
 from jointmap.graph.calibrate import ODOMETRY_PARAMETERS
 from jointmap.graph.problem import Assignment, Block, Problem, State
 from jointmap.ingest.survey import Provenance
 from jointmap.solve.gauge import Gauge, components, make_gauge, motion_basis, point_motion, pose_motion
 from jointmap.solve.kernels import Kernel
-from jointmap.solve.layout import Layout, landmark_of_rows, make_layout, oriented_landmarks
+from jointmap.solve.layout import Layout, landmark_of_rows, make_layout, oriented_landmarks, oriented_tracks
 from jointmap.solve.linear import LinearGraph, Rows
 
 Floats = NDArray[np.float64]
@@ -125,7 +125,7 @@ def make_system(
     calibrated[list(sensitivity)] = True
     layout = make_layout(problem, assignment, used, calibrated, links)
     tied = Links(links, assignment.landmark[links], problem.tracks.claim[links], link_sigma)
-    oriented = oriented_landmarks(problem, assignment)
+    oriented = oriented_landmarks(problem, assignment, oriented_tracks(problem, used), links)
     parts: list[Part] = []
     for at, (block, rows, w, kernel) in enumerate(
         zip(problem.blocks, used, whiten, kernels, strict=True)
@@ -225,44 +225,76 @@ def cost(system: System, state: State) -> float:
             total += 0.5 * float(norm @ norm)
         else:
             total += float(part.kernel.loss(norm, part.whiten.shape[1]).sum())
-    gap = link_residual(system, state)
-    total += 0.5 * float(np.einsum("nm,nm->", gap, gap))
+    for _, tied in link_rows(system, state, jacobians=False):
+        total += 0.5 * float(np.einsum("nm,nm->", tied.rhs, tied.rhs))
     for robot in system.sensitivity:
         v = _prior_residual(system, state, robot)
         total += 0.5 * float(v @ v)
     return total
 
 
-def link_residual(system: System, state: State) -> Floats:
-    """Whitened difference (n, dim) between each linked track's landmark and the shared one."""
+def link_rows(
+    system: System, state: State, *, jacobians: bool = True
+) -> list[tuple[Ints, Rows]]:
+    """Whitened rows of the links, in groups: which links (k,), and their rows.
+
+    Two poses are tied as poses, everything else by position.
+    """
     links = system.links
-    return np.asarray((state.landmarks[links.own] - state.landmarks[links.shared]) / links.sigma)
-
-
-def link_rows(system: System, state: State) -> list[Rows]:
-    """Rows of the links; an oriented landmark is tied by its position."""
-    links, layout, dim = system.links, system.layout, system.problem.dimension
-    if not len(links.track):
-        return []
-    residual = link_residual(system, state)
+    both = system.oriented[links.own] & system.oriented[links.shared]
+    half = system.oriented[links.shared] & ~both
     out = []
-    oriented = system.oriented[links.shared]
-    for poses in (False, True):
-        rows = np.flatnonzero(oriented == poses)
-        if not len(rows):
-            continue
-        keys = [layout.key_of_landmark[links.own[rows]], layout.key_of_landmark[links.shared[rows]]]
-        sides = []
-        for sign, landmark in ((1.0, links.own[rows]), (-1.0, links.shared[rows])):
-            block = np.broadcast_to(np.eye(dim), (len(rows), dim, dim))
-            if poses:
-                assert state.orientations is not None
-                turn = state.orientations[landmark]
-                zero = np.zeros((len(rows), dim, 1 if dim == 2 else 3))
-                block = np.concatenate([turn, zero] if dim == 2 else [zero, turn], axis=2)
-            sides.append(sign * block / links.sigma)
-        out.append(Rows(keys, sides, -residual[rows]))
+    for group, make in ((both, _pose_links), (half, _half_links), (~both & ~half, _point_links)):
+        rows = np.flatnonzero(group)
+        if len(rows):
+            out.append((rows, make(system, state, rows, jacobians)))
     return out
+
+
+def _link_keys(system: System, rows: Ints) -> list[Ints]:
+    key = system.layout.key_of_landmark
+    return [key[system.links.own[rows]], key[system.links.shared[rows]]]
+
+
+def _landmark_poses(system: System, state: State, index: Ints) -> Floats:
+    assert state.orientations is not None
+    group = frames.group(system.problem.dimension)
+    return np.asarray(group.build(state.orientations[index], state.landmarks[index]))
+
+
+def _pose_links(system: System, state: State, rows: Ints, jacobians: bool) -> Rows:
+    group = frames.group(system.problem.dimension)
+    links = system.links
+    own = _landmark_poses(system, state, links.own[rows])
+    shared = _landmark_poses(system, state, links.shared[rows])
+    still = group.identity(1)
+    lin = relative_pose(group, still, shared, still, own, still, jacobians=jacobians)
+    rhs = -lin.residual / links.sigma
+    if not jacobians:
+        return Rows([], [], rhs)
+    assert lin.jac_a is not None and lin.jac_b is not None
+    return Rows(
+        _link_keys(system, rows), [lin.jac_b / links.sigma, lin.jac_a / links.sigma], rhs
+    )
+
+
+def _point_links(system: System, state: State, rows: Ints, jacobians: bool) -> Rows:
+    links, dim = system.links, system.problem.dimension
+    gap = state.landmarks[links.own[rows]] - state.landmarks[links.shared[rows]]
+    one = np.broadcast_to(np.eye(dim) / links.sigma, (len(rows), dim, dim))
+    return Rows(_link_keys(system, rows), [one, -one] if jacobians else [], -gap / links.sigma)
+
+
+def _half_links(system: System, state: State, rows: Ints, jacobians: bool) -> Rows:
+    """A point tied to the position of a shared landmark that others see with orientation."""
+    made = _point_links(system, state, rows, jacobians)
+    if jacobians:
+        assert state.orientations is not None
+        turn = state.orientations[system.links.shared[rows]]
+        zero = np.zeros((*turn.shape[:2], 1 if turn.shape[1] == 2 else 3))
+        body = np.concatenate([turn, zero] if turn.shape[1] == 2 else [zero, turn], axis=2)
+        made.jacobians[1] = -body / system.links.sigma
+    return made
 
 
 def _prior_residual(system: System, state: State, robot: int) -> Floats:
@@ -321,7 +353,7 @@ def linearise_system(system: System, state: State) -> LinearisedSystem:
         weights.append(np.ones(len(part.index)) if weight is None else weight)
         if part.block.kind in ("fix", "control"):
             absolute.append(_absolute_motion(system, part, state, rows))
-    for rows in link_rows(system, state):
+    for _, rows in link_rows(system, state):
         graph.push(rows)
         total += 0.5 * float(np.einsum("nm,nm->", rows.rhs, rows.rhs))
     for robot in system.sensitivity:

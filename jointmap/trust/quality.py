@@ -70,15 +70,17 @@ def assess(system: System, state: State) -> Quality:
     for part in system.parts:
         rows, residual = part_rows(system, part, state)
         parts.append(PartQuality(residual, redundancy_matrices(rows.keys, rows.jacobians, inverse)))
-    links = None
-    tied = link_rows(system, state)
-    if tied:
-        # Point links and pose links come as two groups; put them back in the order of the tracks.
-        oriented = system.oriented[system.links.shared]
-        order = np.concatenate([np.flatnonzero(~oriented), np.flatnonzero(oriented)])
-        back = np.argsort(order)
-        links = PartQuality(
-            np.concatenate([-r.rhs for r in tied])[back],
-            np.concatenate([redundancy_matrices(r.keys, r.jacobians, inverse) for r in tied])[back],
-        )
+    links = _link_quality(system, state, inverse) if len(system.links.track) else None
     return Quality(lin.gauge, inverse, SquareRootFactor(tree), tuple(parts), links)
+
+
+def _link_quality(system: System, state: State, inverse: SelectedInverse) -> PartQuality:
+    """Quality of the links; those tied by position have rows of zeros in place of rotation."""
+    groups = link_rows(system, state)
+    n, m = len(system.links.track), max(rows.rhs.shape[1] for _, rows in groups)
+    whitened, redundancy = np.zeros((n, m)), np.zeros((n, m, m))
+    for index, rows in groups:
+        size = rows.rhs.shape[1]
+        whitened[index, :size] = -rows.rhs
+        redundancy[index, :size, :size] = redundancy_matrices(rows.keys, rows.jacobians, inverse)
+    return PartQuality(whitened, redundancy)
