@@ -180,7 +180,9 @@ def _association_verdict(outcome: Outcome, i: int, linked: bool) -> tuple[str, s
         if len(swapped):
             reason += f"; swapped with label {tracks.labels[swapped[0]]}"
     elif decided.unresolved[i]:
-        reason += "; which of the contradicting labels is wrong cannot be told"
+        return "unresolved", (
+            f"contradicts the only other claim on {claim}; which of the two is wrong cannot be told"
+        )
     return "rejected", reason
 
 

@@ -97,9 +97,14 @@ def review(tracks: Tracks, accepted: Bools, evidence: Evidence, gate: float) -> 
     removed = accepted & ~out
     alternative = np.full(n, -1, dtype=np.int64)
     claimed = (tracks.claim >= 0) & ~tracks.rejected
-    waiting = np.flatnonzero(claimed & ~accepted & (evidence.component[evidence.own] >= 0))
+    present = claimed & (evidence.component[evidence.own] >= 0)
+    waiting = np.flatnonzero(present & ~accepted)
     supported = _supported(tracks, accepted, evidence)
-    alternative[waiting] = _alternatives(tracks, waiting, supported, evidence, scale)
+    # A landmark that one track alone holds is no more certain than the claim that contradicts it.
+    contested = np.zeros(len(supported), dtype=bool)
+    contested[tracks.claim[waiting]] = True
+    asked = np.flatnonzero(present & (~accepted | (contested & (supported < 2))[tracks.claim]))
+    alternative[asked] = _alternatives(tracks, asked, supported, evidence, scale)
     unresolved = np.zeros(n, dtype=bool)
     if not removed.any():
         _readmit(tracks, waiting, accepted, out, statistic, alternative, supported, evidence, scale, limit)
@@ -218,13 +223,15 @@ def _settle(
     scale: float,
     limit: float,
 ) -> None:
-    """Landmarks that nobody holds yet: the largest group of claims that agree takes the name."""
+    """Landmarks that nobody holds, or one against others: the largest group that agrees takes it."""
     claimed = (tracks.claim >= 0) & ~tracks.rejected & (evidence.component[evidence.own] >= 0)
     held = np.bincount(tracks.claim[claimed & out], minlength=len(evidence.component))
-    for landmark in np.unique(tracks.claim[claimed]):
-        if held[landmark]:
-            continue
-        mine = np.flatnonzero(claimed & (tracks.claim == landmark))
+    asking = np.bincount(tracks.claim[claimed], minlength=len(evidence.component))
+    order = np.argsort(tracks.claim, kind="stable")
+    start = np.searchsorted(tracks.claim[order], np.arange(len(held) + 1))
+    for landmark in np.flatnonzero((held == 0) & (asking > 0) | (held == 1) & (asking > 1)):
+        mine = order[start[landmark] : start[landmark + 1]]
+        mine = mine[claimed[mine]]
         i, j = np.triu_indices(len(mine), 1)
         d2 = distance(evidence, evidence.own[mine[i]], evidence.own[mine[j]], scale)
         agree = np.eye(len(mine), dtype=bool)
@@ -233,10 +240,14 @@ def _settle(
         free = alternative[mine] < 0
         # Agreement counts first; then a label that does not sit on another landmark; then sightings.
         rank = np.lexsort((-tracks.n_sightings[mine], ~free, -size))
-        group = agree[rank[0]] & (free | (size[rank[0]] > 1))
-        out[mine[group]] = True
+        best = int(size[rank[0]])
+        if best > 1 or free.sum() == 1 or len(mine) == 1:
+            group = agree[rank[0]]
+        else:
+            # One against one (or all of them elsewhere): nothing tells whose label is right.
+            group = np.zeros(len(mine), dtype=bool)
+            unresolved[mine[free]] = True
+        out[mine] = group
         if len(mine) > 1:
             other = np.array([d2[(i == k) | (j == k)].min() for k in range(len(mine))])
             statistic[mine] = np.where(np.isfinite(other), other, np.nan)
-            if size[rank[0]] == 1 and free.sum() > 1:
-                unresolved[mine[free]] = True
