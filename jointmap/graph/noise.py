@@ -47,7 +47,7 @@ DEFAULT_SIGMA: Mapping[str, float] = {
     "rotation_per_sqrt_rad": 0.06,
     "translation_per_sqrt_s": 0.005,
     "rotation_per_sqrt_s": 0.003,
-    "tilt_rad": 0.02,
+    "tilt_rad": 0.01,
 }
 #: Kinds whose rows come in bursts with a common error.
 BURSTY = ("sighting", "encounter")
@@ -80,8 +80,12 @@ class NoiseTerm:
 
     @property
     def free(self) -> bool:
-        """Whether the data may change the value."""
-        return self.origin in ("default", "estimated")
+        """Whether the data may change the value.
+
+        Not the tilt: it comes from the same odometry as the increments, whose residuals against it
+        vanish by construction and say nothing about either.
+        """
+        return self.origin in ("default", "estimated") and self.component != "tilt_rad"
 
 
 @dataclass(frozen=True)

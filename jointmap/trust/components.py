@@ -23,6 +23,7 @@ from jointmap.graph.noise import (
     NoiseTerm,
     TermKey,
     term_shapes,
+    whitening,
     with_value,
 )
 from jointmap.graph.problem import Problem
@@ -94,11 +95,13 @@ def _add(
     terms, shapes, _ = term_shapes(block, problem, noise)
     if not any(t.free for t in terms):
         return
+    w = part.whiten
+    if block.kind == "odometry" and problem.dimension == 3 and problem.gravity_aligned:
+        w, shapes, stats = _without_tilt(w, shapes, stats)
     t, dof = stats.statistic()
     inside = (dof > 0) & (t <= chi2.ppf(GATE, np.maximum(dof, 1)))
     factor = truncation_factor(np.maximum(dof, 1), GATE)
     left = float(np.trace(stats.redundancy[inside], axis1=1, axis2=2).sum())
-    w = part.whiten
     for term, shape in zip(terms, shapes, strict=True):
         if not term.free:
             continue
@@ -112,3 +115,25 @@ def _add(
         total.redundancy += term.value**2 * float(expected[inside].sum())
         total.support += left
 
+
+def _without_tilt(
+    whiten: Floats, shapes: Floats, stats: PartQuality
+) -> tuple[Floats, Floats, PartQuality]:
+    """Heading and translation alone (body z rotation, x, y, z) of spatial odometry increments.
+
+    Gravity-aligned odometry agrees with its own tilt by construction; roll and pitch would make its
+    rotation noise look like nothing.
+    """
+    keep = np.array([2, 3, 4, 5])
+    back = np.linalg.inv(whiten)
+    residual = np.einsum("nij,nj->ni", back, stats.whitened)[:, keep]
+    left = (back @ stats.redundancy @ np.swapaxes(back, 1, 2))[:, keep[:, None], keep]
+    covariance = (back @ np.swapaxes(back, 1, 2))[:, keep[:, None], keep]
+    again = whitening(covariance)
+    return (
+        again,
+        shapes[:, :, keep[:, None], keep],
+        PartQuality(
+            np.einsum("nij,nj->ni", again, residual), again @ left @ np.swapaxes(again, 1, 2)
+        ),
+    )
