@@ -31,6 +31,7 @@ from jointmap.products.reference import Reference
 from jointmap.progress import Progress, Silent
 from jointmap.settings import Settings
 from jointmap.solve.kernels import Kernel
+from jointmap.solve.linear import Ordering, system_order
 from jointmap.solve.associations import Evidence, Review, review
 from jointmap.solve.decisions import Decisions, gate_rows, statistic_scale
 from jointmap.solve.optimise import Optimised, OptimiseSettings, optimise
@@ -41,7 +42,7 @@ from jointmap.solve.session import (
     usable_rows,
     whiten_blocks,
 )
-from jointmap.solve.system import Part, System, linearise, whitened_norm
+from jointmap.solve.system import Part, System, linearise, linearise_system, whitened_norm
 from jointmap.trust.components import update_noise
 from jointmap.trust.outcome import Outcome, association_evidence
 from jointmap.trust.quality import Quality, assess
@@ -70,6 +71,7 @@ class _Run:
     decisions: Decisions
     review: Review | None = None
     sensitivity: dict[int, Floats] | None = None
+    ordering: tuple[bytes, Ordering] | None = None
     notes: list[str] = field(default_factory=list)
 
 
@@ -188,7 +190,17 @@ def _optimise(run: _Run, system: System, relative: float) -> Optimised:
         run.progress.update(counter[0], text)
 
     settings = OptimiseSettings(iterations=run.settings.max_iterations, relative=relative)
-    return optimise(system, run.state, settings, report=report)
+    return optimise(system, run.state, settings, _ordering(run, system), report)
+
+
+def _ordering(run: _Run, system: System) -> Ordering:
+    """Elimination ordering of a system, made once for each set of variables."""
+    layout = system.layout
+    key = layout.landmark_of_key.tobytes() + layout.calibration_key.tobytes()
+    if run.ordering is None or run.ordering[0] != key:
+        graph = linearise_system(system, run.state).graph
+        run.ordering = (key, system_order(system, graph))
+    return run.ordering[1]
 
 
 def _absorb(run: _Run, done: Optimised) -> float:
@@ -240,6 +252,9 @@ def _rounds(run: _Run) -> bool:
     Returns whether they settled.
     """
     estimate = run.settings.noise == "estimated" and any(t.free for t in run.noise.terms.values())
+    if not estimate and not _doubted_tracks(run):
+        # Nothing to learn from the robust state that the final solve would not show better.
+        return True
     for number in range(run.settings.max_rounds):
         run.progress.stage(f"round {number + 1}")
         quality, system = _assess(run)
@@ -251,17 +266,27 @@ def _rounds(run: _Run) -> bool:
         moved = _review(run, system, quality)
         if not moved and change < SETTLED:
             return True
-        step = _absorb(run, _optimise(run, _system(run, robust=True), 1e-3))
+        _absorb(run, _optimise(run, _system(run, robust=True), 1e-3))
         _gate_by_norm(run, _system(run, robust=True))
-        if not estimate and not moved and step < 0.02:
-            return True
     return False
+
+
+def _doubted_tracks(run: _Run) -> bool:
+    """Whether the robust solution gave up half of an accepted track's sightings or more."""
+    n = len(run.problem.tracks.robot)
+    total, kept = np.zeros(n), np.zeros(n)
+    rows = zip(run.problem.blocks, run.decisions.usable, run.decisions.used, strict=True)
+    for block, usable, used in rows:
+        if block.kind == "sighting":
+            total += np.bincount(block.b[usable], minlength=n)
+            kept += np.bincount(block.b[used], minlength=n)
+    return bool((run.decisions.accepted & (total > 0) & (kept < 0.5 * total)).any())
 
 
 def _assess(run: _Run) -> tuple[Quality, System]:
     """Covariances at the present state and inlier set."""
     system = _system(run, robust=False)
-    return assess(system, run.state), system
+    return assess(system, run.state, _ordering(run, system)), system
 
 
 def _review(run: _Run, system: System, quality: Quality) -> bool:
@@ -298,7 +323,7 @@ def _final(run: _Run) -> tuple[System, Optimised, Quality]:
         done = _optimise(run, system, 1e-9)
         step = _absorb(run, done)
         system = _system(run, robust=False)
-        quality = assess(system, run.state)
+        quality = assess(system, run.state, _ordering(run, system))
         changed = _review_rows(run, system, quality)
         changed |= _review(run, system, quality)
         if (not changed and step < 1e-3) or number == run.settings.max_rounds - 1:

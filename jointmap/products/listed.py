@@ -169,19 +169,19 @@ def _association_verdict(outcome: Outcome, i: int, linked: bool) -> tuple[str, s
     reason = f"{gap:.2f} m from {claim} as the others place it"
     if not np.isfinite(gap):
         reason = f"contradicts the other claims on {claim}"
-    if decided.alternative[i] >= 0:
-        other = int(decided.alternative[i])
-        reason += f"; agrees with {tracks.landmarks[other]}"
+    alternative = int(decided.alternative[i])
+    if alternative >= 0:
+        reason += f"; agrees with {tracks.landmarks[alternative]}"
         swapped = np.flatnonzero(
             (tracks.robot == tracks.robot[i])
-            & (tracks.claim == other)
+            & (tracks.claim == alternative)
             & (decided.alternative == tracks.claim[i])
         )
         if len(swapped):
             reason += f"; swapped with label {tracks.labels[swapped[0]]}"
-    elif decided.unresolved[i]:
+    if decided.unresolved[i]:
         return "unresolved", (
-            f"contradicts the only other claim on {claim}; which of the two is wrong cannot be told"
+            reason + f"; contradicts the other claim on {claim}, which of them is wrong cannot be told"
         )
     return "rejected", reason
 

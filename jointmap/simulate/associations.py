@@ -126,17 +126,21 @@ def _swap(claim: Ints, rows: Ints, robot: Ints, count: int, rng: np.random.Gener
 
 
 def _shift(claim: Ints, rows: Ints, robot: Ints, count: int, rng: np.random.Generator) -> Ints:
-    """Shift blocks of rows, ordered along the walls, to the next row's plate; rows changed.
+    """Shift a block of rows of each of several robots by one, ordered along the walls.
 
-    Robots are taken in random order; of each at most all but the last of its rows.
+    Blocks are spread evenly over the team, at least four rows each where there are that many, so
+    that the stated share is that of every robot and not the ruin of one. Returns the rows changed.
     """
     changed: list[Ints] = [np.empty(0, dtype=np.int64)]
     truth = claim.copy()
-    for number in rng.permutation(np.unique(robot[rows])):
+    numbers = rng.permutation(np.unique(robot[rows]))
+    blocks = int(np.clip(count // 4, 1, len(numbers)))
+    for place, number in enumerate(numbers):
         if count <= 0:
             break
         own = rows[robot[rows] == number]
-        size = min(count, len(own) - 1)
+        wanted = -(-count // max(blocks - place, 1))
+        size = min(wanted, len(own) - 1)
         if size < 1:
             continue
         first = int(rng.integers(0, len(own) - size))

@@ -108,7 +108,7 @@ def review(tracks: Tracks, accepted: Bools, evidence: Evidence, gate: float) -> 
     unresolved = np.zeros(n, dtype=bool)
     if not removed.any():
         _readmit(tracks, waiting, accepted, out, statistic, alternative, supported, evidence, scale, limit)
-        _settle(tracks, out, statistic, alternative, unresolved, evidence, scale, limit)
+        _settle(tracks, out, statistic, alternative, unresolved, supported, evidence, scale, limit)
     out[tracks.forced & claimed] = True
     out[tracks.rejected] = False
     return Review(out, statistic, alternative, unresolved, scale, bool((out != accepted).any()))
@@ -219,6 +219,7 @@ def _settle(
     statistic: Floats,
     alternative: Ints,
     unresolved: Bools,
+    supported: Ints,
     evidence: Evidence,
     scale: float,
     limit: float,
@@ -237,16 +238,18 @@ def _settle(
         agree = np.eye(len(mine), dtype=bool)
         agree[i, j] = agree[j, i] = d2 < limit
         size = agree.sum(axis=1)
+        firmly = (alternative[mine] >= 0) & (supported[np.maximum(alternative[mine], 0)] > 1)
         free = alternative[mine] < 0
-        # Agreement counts first; then a label that does not sit on another landmark; then sightings.
-        rank = np.lexsort((-tracks.n_sightings[mine], ~free, -size))
-        best = int(size[rank[0]])
-        if best > 1 or free.sum() == 1 or len(mine) == 1:
+        # Agreement counts first, then a label that does not sit on another landmark.
+        rank = np.lexsort((-tracks.n_sightings[mine], ~free, firmly, -size))
+        if size[rank[0]] > 1 or len(mine) == 1:
             group = agree[rank[0]]
+        elif free.sum() == 1 and firmly.sum() == len(mine) - 1:
+            group = free
         else:
-            # One against one (or all of them elsewhere): nothing tells whose label is right.
+            # One against one: nothing tells whose label is right, so the name goes to neither.
             group = np.zeros(len(mine), dtype=bool)
-            unresolved[mine[free]] = True
+            unresolved[mine[~firmly]] = True
         out[mine] = group
         if len(mine) > 1:
             other = np.array([d2[(i == k) | (j == k)].min() for k in range(len(mine))])

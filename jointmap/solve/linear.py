@@ -20,6 +20,8 @@ from jointmap.solve.layout import Layout
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
+#: GTSAM's elimination ordering, for rooms that only pass it on.
+Ordering = gtsam.Ordering
 _UNIT = {m: gtsam.noiseModel.Unit.Create(m) for m in range(1, 13)}
 
 

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from jointmap.graph.problem import State
 from jointmap.solve.gauge import Gauge
-from jointmap.solve.linear import eliminate, system_order
+from jointmap.solve.linear import Ordering, eliminate, system_order
 from jointmap.solve.system import System, linearise_system, link_rows, part_rows
 from jointmap.trust.elimination import clique_tree
 from jointmap.trust.marginals import SelectedInverse, selected_inverse_of
@@ -57,13 +57,13 @@ class Quality:
     links: PartQuality | None
 
 
-def assess(system: System, state: State) -> Quality:
+def assess(system: System, state: State, ordering: Ordering | None = None) -> Quality:
     """Covariances and redundancies of a system at a state, at full weight of its rows.
 
     The kernels of the system must be None: a kernel's curvature is not a covariance.
     """
     lin = linearise_system(system, state)
-    ordering = system_order(system, lin.graph)
+    ordering = system_order(system, lin.graph) if ordering is None else ordering
     tree = clique_tree(eliminate(lin.graph, ordering), system.layout.dims)
     inverse = selected_inverse_of(tree)
     parts = []

@@ -4,7 +4,7 @@ Hypotheses come from the heaviest consistent set, from the heaviest set that con
 runner-up) and from random samples. Each is refitted to what agrees with it and weighed by the
 distinct landmarks, meetings and closures that do. A link is accepted when that weight is three or
 more, the geometry determines the transform, and wrong associations alone would hardly (fewer than
-0.01 expected times) agree as well.
+0.001 expected times) agree as well.
 """
 
 from __future__ import annotations
@@ -38,7 +38,7 @@ Bools = NDArray[np.bool_]
 #: Weight of agreement that a link needs.
 LEAST_WEIGHT = 3.0
 #: Accidental sets of the same size that may be expected.
-ACCIDENTS = 0.01
+ACCIDENTS = 0.001
 #: Standard deviation of the rotation above which the geometry does not determine it.
 LOOSE_RAD = 0.3
 #: The runner-up makes a link ambiguous from this share of its weight on.
