@@ -30,10 +30,10 @@ from jointmap.products.assemble import assemble
 from jointmap.products.reference import Reference
 from jointmap.progress import Progress, Silent
 from jointmap.settings import Settings
+from jointmap.solve.associations import Review, review
+from jointmap.solve.decisions import Decisions, gate_rows, statistic_scale
 from jointmap.solve.kernels import Kernel
 from jointmap.solve.linear import Ordering, system_order
-from jointmap.solve.associations import Evidence, Review, review
-from jointmap.solve.decisions import Decisions, gate_rows, statistic_scale
 from jointmap.solve.optimise import Optimised, OptimiseSettings, optimise
 from jointmap.solve.session import (
     first_state,
@@ -149,9 +149,7 @@ def _prepare(survey: Survey, settings: Settings, progress: Progress) -> _Run:
     state = first_state(problem, start.poses, start.points, start.turns, accepted)
     usable = usable_rows(problem, state)
     decisions = Decisions(accepted, usable, tuple(np.ones(b.n) for b in problem.blocks), usable)
-    run = _Run(
-        survey, settings, progress, problem, noise, calibration, start, state, decisions
-    )
+    run = _Run(survey, settings, progress, problem, noise, calibration, start, state, decisions)
     _drop_loose(run)
     return run
 

@@ -5,7 +5,6 @@ from __future__ import annotations
 import math
 import os
 import platform
-import sys
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, fields
 from importlib.metadata import PackageNotFoundError, version
@@ -138,8 +137,9 @@ class Settings:
         if self.workers:
             return self.workers
         # A container or `taskset` may grant fewer processors than the machine has.
-        if sys.platform == "linux":
-            return len(os.sched_getaffinity(0))
+        affinity = getattr(os, "sched_getaffinity", None)
+        if affinity is not None:
+            return len(affinity(0))
         return os.cpu_count() or 1
 
     def to_dict(self) -> dict[str, Any]:

@@ -1,0 +1,1 @@
+"""Survey -> Problem: keyframes, odometry, measurement blocks, start values, noise terms."""

@@ -113,7 +113,8 @@ def attach(context: Context, robot: int, t_s: Floats) -> tuple[Ints, Floats, Boo
 
 def bursts(sensor: Ints, target: Ints, t_s: Floats, gap_s: float, window_s: float) -> Ints:
     """Burst number (n,) of rows: one sensor, one target, no pause longer than ``gap_s``, no longer
-    in all than ``window_s``."""
+    in all than ``window_s``.
+    """
     order = np.lexsort((t_s, target, sensor))
     new = np.ones(len(order), dtype=bool)
     if len(order) > 1:
@@ -286,7 +287,9 @@ def gravity_block(context: Context, robot: int) -> Block:
     n = len(index)
     source = context.motions[robot].odometry.source
     rows = np.clip(
-        np.searchsorted(context.motions[robot].t_rows, keyframes.t_s[index], side="right") - 1, 0, None
+        np.searchsorted(context.motions[robot].t_rows, keyframes.t_s[index], side="right") - 1,
+        0,
+        None,
     )
     return Block(
         kind="gravity",

@@ -16,9 +16,9 @@ inverse,
 
     d = d_i + J M M_j^-1 J_r^-1 B (d_j - V d_i).
 
-Both parts are of first order in errors (J by ``I + ad / 2``, J_r likewise); the mean is exact at the keyframes. Before the first, after
-the last keyframe and on the far sides of a cut the odometry is extrapolated, its covariance growing
-away from the keyframe.
+Both parts are of first order in errors (J by ``I + ad / 2``, J_r likewise); the mean is exact at
+the keyframes. Before the first, after the last keyframe and on the far sides of a cut the odometry
+is extrapolated, its covariance growing away from the keyframe.
 """
 
 from __future__ import annotations

@@ -16,7 +16,7 @@ from jointmap.graph import blocks as make
 from jointmap.graph.clock import SurveyClock, fixed_values
 from jointmap.graph.keyframes import choose_instants, join
 from jointmap.graph.motion import Motion, odometry_blocks, prepare_motion
-from jointmap.graph.problem import Block, Keyframes, Problem, Unusable
+from jointmap.graph.problem import Block, Keyframes, Kind, Problem, Unusable
 from jointmap.graph.tracks import TrackTable
 from jointmap.ingest.survey import Observations, Survey
 
@@ -78,7 +78,11 @@ def build_problem(
         breaks.append(made.breaks)
     context = replace(context, reckoned=np.concatenate(reckoned))
     for r, log in enumerate(survey.robots.values()):
-        for table, kind in ((log.sightings, "sighting"), (log.encounters, "encounter")):
+        tables: tuple[tuple[Observations | None, Kind], ...] = (
+            (log.sightings, "sighting"),
+            (log.encounters, "encounter"),
+        )
+        for table, kind in tables:
             if table is None or len(table.t_s) == 0:
                 continue
             rows = context.rows(r, table)
@@ -150,7 +154,7 @@ class _Context:
         """Survey time (n,) of the instants that a table's rows describe."""
         name = list(self.survey.robots)[robot]
         lag = np.array([self.lags.get((name, s), 0.0) for s in table.sensors] or [0.0])
-        return self.clock.survey_time(name, table.t_s) + lag[table.sensor]
+        return np.asarray(self.clock.survey_time(name, table.t_s) + lag[table.sensor])
 
     def rows(self, robot: int, table: Observations) -> Bools:
         """Rows (n,) that the user's masks leave."""

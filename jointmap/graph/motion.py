@@ -90,10 +90,10 @@ def odometry_blocks(
         cut[min(max(i, 1), hi - lo - 1)] = True
     keep = np.flatnonzero(~cut[1:])
     covariance = np.array(made.row_cov)
-    gap = made.gap & np.isfinite(made.gap_cov).all(axis=(1, 2))
+    gap: Bools = np.asarray(made.gap & np.isfinite(made.gap_cov).all(axis=(1, 2)))
     defaults = np.array([DEFAULT_SIGMA[n] for n in ODOMETRY_TERMS]) ** 2
     weak = np.tensordot(made.basis, defaults, axes=(1, 0)) + made.gap_cov
-    stated = np.isfinite(covariance).all(axis=(1, 2))
+    stated: Bools = np.asarray(np.isfinite(covariance).all(axis=(1, 2)))
     base = np.where(stated[:, None, None], np.nan_to_num(covariance), 0.0) + made.gap_cov
     covariance[gap] = np.where(stated[gap, None, None], base[gap], weak[gap])
     rows = np.clip(np.searchsorted(motion.t_rows, stamps[:-1], side="right") - 1, 0, None)
@@ -118,7 +118,9 @@ def odometry_blocks(
         source=Provenance(source.files, source.file[rows[keep]], source.row[rows[keep]]),
         burst=np.arange(n),
     )
-    return OdometryMade([block] if n else [], poses, cut, _gap_notes(motion, stamps, made.gap_s, made.gap))
+    return OdometryMade(
+        [block] if n else [], poses, cut, _gap_notes(motion, stamps, made.gap_s, made.gap)
+    )
 
 
 def _gap_notes(motion: Motion, stamps: Floats, gap_s: Floats, gap: Bools) -> list[str]:

@@ -27,6 +27,7 @@ from jointmap.graph.problem import ODOMETRY_TERMS, Block, Problem
 from jointmap.ingest.survey import Survey
 
 Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
 TermKey = tuple[str, str, str, str]
 Origin = Literal["given", "edited", "default", "estimated"]
 
@@ -134,9 +135,7 @@ def initial_noise(survey: Survey, problem: Problem) -> Noise:
     model; the other term is then zero and stays so.
     """
     edits = {
-        (e.robot, e.sensor or "", e.name): e.value
-        for e in survey.edits.values
-        if e.what == "sigma"
+        (e.robot, e.sensor or "", e.name): e.value for e in survey.edits.values if e.what == "sigma"
     }
     nan = float("nan")
     terms: list[NoiseTerm] = []
@@ -159,9 +158,9 @@ def initial_noise(survey: Survey, problem: Problem) -> Noise:
         sensor = block.sensor or block.kind
         for name in dict.fromkeys(residual_names(block, problem.dimension)):
             default = DEFAULT_SIGMA[name] if block.kind != "fix" else 1.0
-            stated = _stated(given_map, edits, robot, block.sensor, name)
+            model = _stated(given_map, edits, robot, block.sensor, name)
             for term, share in _terms_of(block, name):
-                given, edited = stated.get(term, (nan, nan))
+                given, edited = model.get(term, (nan, nan))
                 terms.append(_term(robot, sensor, name, term, given, edited, share * default))
     return Noise({t.key: t for t in terms})
 
@@ -233,13 +232,13 @@ def term_shapes(
     robot = problem.robots[block.robot] if block.robot >= 0 else ""
     m = residual_size(block, problem.dimension)
     stated = np.zeros((block.n, m, m))
-    own = np.isfinite(block.sigma)
+    own: Bools = np.asarray(np.isfinite(block.sigma))
     index = np.arange(m)
     stated[:, index, index] = np.where(own, block.sigma, 0.0) ** 2
     if block.covariance is not None:
-        full = np.isfinite(block.covariance).all(axis=(1, 2))
+        full: Bools = np.asarray(np.isfinite(block.covariance).all(axis=(1, 2)))
         stated[full] = block.covariance[full]
-        own = own | full[:, None]
+        own = np.asarray(own | full[:, None])
     free = ~own
     if block.kind == "odometry":
         assert block.odometry_basis is not None

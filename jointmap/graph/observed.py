@@ -52,8 +52,12 @@ def split_by_components(table: Observations, usable: Bools, dimension: int, kind
     if dimension == 2:
         point[:, [1, 5]] = False
     turned = seen[:, 6] if dimension == 2 else seen[:, 7:11].all(axis=1)
-    cartesian = point[:, 3:5].all(axis=1) & (point[:, 5] if dimension == 3 else True)
-    polar = point[:, [0, 2]].all(axis=1) & (point[:, 1] if dimension == 3 else True)
+    cartesian: Bools = np.asarray(
+        point[:, 3:5].all(axis=1) & (point[:, 5] if dimension == 3 else True)
+    )
+    polar: Bools = np.asarray(
+        point[:, [0, 2]].all(axis=1) & (point[:, 1] if dimension == 3 else True)
+    )
     pose = usable & turned & (cartesian | polar)
     rest = usable & ~pose
     # Cartesian and polar forms of one row say the same thing twice; the Cartesian one is kept.

@@ -1,0 +1,1 @@
+"""The reference as arrays and tables: assembled, written, read back, shown."""

@@ -38,9 +38,7 @@ def assemble(outcome: Outcome, settings: Settings, progress: Progress) -> Refere
     trust = judge_trust(problem, outcome.system, outcome.quality, n_landmarks(problem))
     kind = settings.datum or survey.datum_kind
     robot = settings.datum_robot or survey.datum_robot
-    expressed = express(
-        problem, outcome.system, outcome.state, outcome.quality, trust, kind, robot
-    )
+    expressed = express(problem, outcome.system, outcome.state, outcome.quality, trust, kind, robot)
     sigma = position_sigma(expressed.pose_cov, problem.dimension)
     trust = judge_trust(problem, outcome.system, outcome.quality, n_landmarks(problem), sigma)
     paths = trajectories(outcome, expressed, trust, settings.gap_s)
@@ -105,7 +103,7 @@ def _meta(
         "components": [robots_of[c] for c in sorted(robots_of)],
         "counts": {
             "keyframes": len(problem.keyframes.t_s),
-            "landmarks": int(len(outcome.system.layout.landmark_of_key)),
+            "landmarks": len(outcome.system.layout.landmark_of_key),
             "measurements": verdict_counts(measurements),
             "odometry_rows": {n: len(r.odometry.t_s) for n, r in survey.robots.items()},
             "iterations": outcome.optimised.iterations,
@@ -134,9 +132,7 @@ def chi_square(outcome: Outcome) -> tuple[float, int]:
 
 def _state(outcome: Outcome, expressed: Expressed) -> dict[str, Any]:
     layout, problem = outcome.system.layout, outcome.problem
-    out: dict[str, Any] = {
-        f"factor_{k}": v for k, v in outcome.quality.factor.to_arrays().items()
-    }
+    out: dict[str, Any] = {f"factor_{k}": v for k, v in outcome.quality.factor.to_arrays().items()}
     out |= {f"datum_{k}": v for k, v in expressed.transform.to_arrays().items()}
     out |= {
         "poses": outcome.state.poses,
@@ -159,5 +155,3 @@ def _state(outcome: Outcome, expressed: Expressed) -> dict[str, Any]:
     if outcome.state.orientations is not None:
         out["orientations"] = outcome.state.orientations
     return out
-
-

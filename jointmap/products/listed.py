@@ -12,10 +12,10 @@ from jointmap import frames
 from jointmap.graph.calibrate import ODOMETRY_PARAMETERS
 from jointmap.ingest.edits import format_edit
 from jointmap.ingest.survey import AssociationEdit
+from jointmap.products.columns import TRUST as TRUST_WORDS
 from jointmap.products.columns import complete, pack_covariance, table_covariance_columns
 from jointmap.products.measured import landmark_names
 from jointmap.schema import pose_columns
-from jointmap.products.columns import TRUST as TRUST_WORDS
 from jointmap.trust.checked import Trust
 from jointmap.trust.frame import Expressed
 from jointmap.trust.outcome import Outcome
@@ -181,7 +181,8 @@ def _association_verdict(outcome: Outcome, i: int, linked: bool) -> tuple[str, s
             reason += f"; swapped with label {tracks.labels[swapped[0]]}"
     if decided.unresolved[i]:
         return "unresolved", (
-            reason + f"; contradicts the other claim on {claim}, which of them is wrong cannot be told"
+            reason
+            + f"; contradicts the other claim on {claim}, which of them is wrong cannot be told"
         )
     return "rejected", reason
 
@@ -237,5 +238,14 @@ def calibration_table(outcome: Outcome) -> pd.DataFrame:
                     "used": True,
                 }
             )
-    columns = ["robot", "sensor", "parameter", "value", "sigma", "significant", "observable", "used"]
+    columns = [
+        "robot",
+        "sensor",
+        "parameter",
+        "value",
+        "sigma",
+        "significant",
+        "observable",
+        "used",
+    ]
     return complete("calibration", outcome.problem.dimension, pd.DataFrame(rows, columns=columns))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import Any
+from typing import Any, cast
 
 import numpy as np
 import pandas as pd
@@ -42,9 +42,7 @@ def measurement_table(outcome: Outcome) -> pd.DataFrame:
     """The measurements table of the reference."""
     problem = outcome.problem
     names = landmark_names(outcome)
-    frames_of = [
-        _block_frame(outcome, at, block, names) for at, block in enumerate(problem.blocks)
-    ]
+    frames_of = [_block_frame(outcome, at, block, names) for at, block in enumerate(problem.blocks)]
     frames_of += [_unusable_frame(problem, group) for group in problem.unusable]
     table = pd.concat([f for f in frames_of if len(f)], ignore_index=True)
     table["id"] = np.arange(len(table))
@@ -244,6 +242,7 @@ def verdict_counts(table: pd.DataFrame) -> Mapping[str, Mapping[str, int]]:
     """Number of measurements by kind and verdict."""
     counts = table.groupby(["kind", "verdict"]).size()
     out: dict[str, dict[str, int]] = {}
-    for (kind, verdict), n in counts.items():
+    for key, n in counts.items():
+        kind, verdict = cast(tuple[str, str], key)
         out.setdefault(str(kind), {})[str(verdict)] = int(n)
     return out

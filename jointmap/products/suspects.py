@@ -114,7 +114,7 @@ def _bursts(outcome: Outcome, measurements: pd.DataFrame) -> list[dict[str, Any]
                 "t_to_s": row.t_to_s,
                 "target": target or None,
                 "statistic": row.w,
-                "reason": f"{target or row.kind} by {robot} at {row.t_from_s:.3f} s"
+                "reason": f"{target or str(row.kind)} by {robot} at {row.t_from_s:.3f} s"
                 f" ({row.n} rows): {row.reason}",
                 "edit": edit,
             }

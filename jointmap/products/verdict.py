@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, cast
 
 import numpy as np
 import pandas as pd
@@ -73,7 +73,9 @@ def judge(
             )
     lost = robots.loc[robots["share_unchecked"] > UNCHECKED_SHARE, "robot"]
     for name in lost:
-        reasons.append(("weak", f"most of the path of {name} is dead reckoning that nothing checks"))
+        reasons.append(
+            ("weak", f"most of the path of {name} is dead reckoning that nothing checks")
+        )
     order = ("not-converged", "inconsistent", "disconnected", "weak")
     status = next((s for s in order if any(r[0] == s for r in reasons)), "ok")
     reasons.sort(key=lambda r: order.index(r[0]))
@@ -93,12 +95,13 @@ def _scale(outcome: Outcome) -> float | None:
 def _rejections(associations: pd.DataFrame, measurements: pd.DataFrame) -> list[tuple[str, str]]:
     out = []
     tested = associations[associations["verdict"].isin(["kept", "rejected"])]
-    for name, rows in tested.groupby("robot"):
-        share = float((rows["verdict"] == "rejected").mean())
-        if share > REJECTED_ASSOCIATIONS and len(rows) >= 4:
+    for name, mine in tested.groupby("robot"):
+        share = float((mine["verdict"] == "rejected").mean())
+        if share > REJECTED_ASSOCIATIONS and len(mine) >= 4:
             out.append(("weak", f"{share:.0%} of the associations of {name} were rejected"))
     rows = measurements[measurements["kind"].isin(["sighting", "encounter", "closure", "fix"])]
-    for (name, kind), group in rows.groupby(["robot", "kind"]):
+    for key, group in rows.groupby(["robot", "kind"]):
+        name, kind = cast(tuple[str, str], key)
         share = float((group["verdict"] == "rejected").mean())
         if share > REJECTED_MEASUREMENTS and len(group) >= 20:
             out.append(("weak", f"{share:.0%} of the {kind}s of {name} were rejected"))
@@ -131,14 +134,16 @@ def _distrust(
     outcome: Outcome, robots: pd.DataFrame, landmarks: pd.DataFrame, suspects: pd.DataFrame
 ) -> tuple[str, ...]:
     out = []
-    for row in robots.itertuples():
-        if row.share_unchecked > 0.02:
+    for row in robots.to_dict("records"):
+        if row["share_unchecked"] > 0.02:
             out.append(
-                f"{row.robot}: {row.share_unchecked:.0%} of its path is dead reckoning that "
+                f"{row['robot']}: {row['share_unchecked']:.0%} of its path is dead reckoning that "
                 "nothing checks (before its first or after its last useful observation)"
             )
-        if row.share_weak > 0.05:
-            out.append(f"{row.robot}: {row.share_weak:.0%} of its path is only weakly checked")
+        if row["share_weak"] > 0.05:
+            out.append(
+                f"{row['robot']}: {row['share_weak']:.0%} of its path is only weakly checked"
+            )
     loose = landmarks[landmarks["trust"] == "unchecked"]
     if len(loose):
         names = ", ".join(loose["landmark"].head(5))

@@ -118,7 +118,7 @@ def _drive(
     return np.asarray(_follow(xy, heading, moved, np.diff(heading), slip, dt), dtype=np.float64)
 
 
-@numba.njit(cache=True)
+@numba.njit(cache=True)  # type: ignore[untyped-decorator]
 def _follow(
     xy: Floats, heading: Floats, moved: Floats, turned: Floats, slip: Floats, dt: Floats
 ) -> Floats:

@@ -1,0 +1,1 @@
+"""Problem -> Solution: robust optimisation and decisions about rows and associations."""

@@ -107,7 +107,18 @@ def review(tracks: Tracks, accepted: Bools, evidence: Evidence, gate: float) -> 
     alternative[asked] = _alternatives(tracks, asked, supported, evidence, scale)
     unresolved = np.zeros(n, dtype=bool)
     if not removed.any():
-        _readmit(tracks, waiting, accepted, out, statistic, alternative, supported, evidence, scale, limit)
+        _readmit(
+            tracks,
+            waiting,
+            accepted,
+            out,
+            statistic,
+            alternative,
+            supported,
+            evidence,
+            scale,
+            limit,
+        )
         _settle(tracks, out, statistic, alternative, unresolved, supported, evidence, scale, limit)
     out[tracks.forced & claimed] = True
     out[tracks.rejected] = False
@@ -138,7 +149,7 @@ def _worst(tracks: Tracks, statistic: Floats, accepted: Bools, limit: float) -> 
     bad = bad[np.argsort(-statistic[bad], kind="stable")]
     bad = bad[statistic[bad] >= 0.3 * statistic[bad[0]]]
     _, first = np.unique(tracks.claim[bad], return_index=True)
-    return bad[np.sort(first)]
+    return np.asarray(bad[np.sort(first)])
 
 
 def _supported(tracks: Tracks, accepted: Bools, evidence: Evidence) -> Ints:
@@ -179,9 +190,9 @@ def _alternatives(
     k = min(4, len(candidates))
     _, near = tree.query(evidence.positions[evidence.own[waiting]], k=k)
     near = candidates[np.reshape(near, (len(waiting), k))]
-    d2 = distance(
-        evidence, np.repeat(evidence.own[waiting], k), near.ravel(), scale
-    ).reshape(len(waiting), k)
+    d2 = distance(evidence, np.repeat(evidence.own[waiting], k), near.ravel(), scale).reshape(
+        len(waiting), k
+    )
     d2[near == tracks.claim[waiting][:, None]] = np.inf
     pick = d2.argmin(axis=1)
     rows = np.arange(len(waiting))

@@ -33,7 +33,8 @@ _SCALE_LEAST = 20
 @dataclass(frozen=True)
 class Decisions:
     """The inlier set: ``accepted`` (T,) associations; per block ``used`` (n,) rows, ``weight``
-    (n,) (one unless odometry is doubted) and ``usable`` (n,) rows that may ever be used."""
+    (n,) (one unless odometry is doubted) and ``usable`` (n,) rows that may ever be used.
+    """
 
     accepted: Bools
     used: tuple[Bools, ...]

@@ -34,7 +34,8 @@ HELD_BELOW = 100.0
 class Gauge:
     """``component`` (n,) of each variable; ``free`` (C,) degrees of freedom held artificially;
     ``anchor`` (C,) the keyframe that holds them, ``rows`` the linear rows that do it,
-    ``directions`` per component: (q, free) global motions that absolute data leave open."""
+    ``directions`` per component: (q, free) global motions that absolute data leave open.
+    """
 
     component: Ints
     anchor: Ints
@@ -116,11 +117,9 @@ def make_gauge(
         directions.append(open_motion)
         free.append(open_motion.shape[1])
         if open_motion.shape[1] and anchor >= 0:
-            body = pose_motion(problem.dimension, poses[anchor : anchor + 1], basis)[0] @ open_motion
-            jacobian = GAUGE_WEIGHT * np.linalg.pinv(body)[None]
-            rows.append(
-                Rows([np.array([anchor])], [jacobian], np.zeros((1, open_motion.shape[1])))
+            body = (
+                pose_motion(problem.dimension, poses[anchor : anchor + 1], basis)[0] @ open_motion
             )
-    return Gauge(
-        component, anchors, np.array(free, dtype=np.int64), tuple(directions), tuple(rows)
-    )
+            jacobian = GAUGE_WEIGHT * np.linalg.pinv(body)[None]
+            rows.append(Rows([np.array([anchor])], [jacobian], np.zeros((1, open_motion.shape[1]))))
+    return Gauge(component, anchors, np.array(free, dtype=np.int64), tuple(directions), tuple(rows))

@@ -27,7 +27,8 @@ Report = Callable[[str], None]
 @dataclass(frozen=True)
 class OptimiseSettings:
     """When to stop: relative decrease of the objective below ``relative`` in two steps running,
-    or no step of a variable above ``step`` (metres, radians); at most ``iterations``."""
+    or no step of a variable above ``step`` (metres, radians); at most ``iterations``.
+    """
 
     iterations: int = 50
     relative: float = 1e-7
@@ -73,7 +74,9 @@ def optimise(
         first = now if iteration == 1 else first
         if ordering is None:
             ordering = system_order(system, lin.graph)
-        moved, new, damping, size = _descend(system, state, lin.graph, now, ordering, damping, settings)
+        moved, new, damping, size = _descend(
+            system, state, lin.graph, now, ordering, damping, settings
+        )
         if report is not None:
             report(f"iteration {iteration}: objective {min(new, now):.6g}")
         if moved is None:

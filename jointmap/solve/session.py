@@ -36,7 +36,9 @@ def own_landmarks(problem: Problem) -> Assignment:
     return Assignment(len(problem.tracks.landmarks) + np.arange(len(problem.tracks.robot)))
 
 
-def first_state(problem: Problem, poses: Floats, points: Floats, turns: Floats | None, accepted: Bools) -> State:
+def first_state(
+    problem: Problem, poses: Floats, points: Floats, turns: Floats | None, accepted: Bools
+) -> State:
     """State from start values.
 
     Parameters
@@ -135,7 +137,7 @@ def _kernel(kernel: Kernel | None, block: Block) -> Kernel | None:
 def usable_rows(problem: Problem, state: State) -> tuple[Bools, ...]:
     """Rows that a factor can be made of: sightings whose landmark has a value."""
     shared = len(problem.tracks.landmarks)
-    finite = np.isfinite(state.landmarks).all(axis=1)
+    finite: Bools = np.asarray(np.isfinite(state.landmarks).all(axis=1))
     out = []
     for block in problem.blocks:
         if block.kind == "sighting":

@@ -14,13 +14,26 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap import frames
-from jointmap.graph.models import Linearised, linearise_block, relative_pose
 from jointmap.graph.calibrate import ODOMETRY_PARAMETERS
+from jointmap.graph.models import Linearised, linearise_block, relative_pose
 from jointmap.graph.problem import Assignment, Block, Problem, State
 from jointmap.ingest.survey import Provenance
-from jointmap.solve.gauge import Gauge, components, make_gauge, motion_basis, point_motion, pose_motion
+from jointmap.solve.gauge import (
+    Gauge,
+    components,
+    make_gauge,
+    motion_basis,
+    point_motion,
+    pose_motion,
+)
 from jointmap.solve.kernels import Kernel
-from jointmap.solve.layout import Layout, landmark_of_rows, make_layout, oriented_landmarks, oriented_tracks
+from jointmap.solve.layout import (
+    Layout,
+    landmark_of_rows,
+    make_layout,
+    oriented_landmarks,
+    oriented_tracks,
+)
 from jointmap.solve.linear import LinearGraph, Rows
 
 Floats = NDArray[np.float64]
@@ -37,9 +50,9 @@ def take_rows(block: Block, rows: Bools | Ints) -> Block:
     changed: dict[str, object] = {}
     for f in fields(block):
         value = getattr(block, f.name)
-        if isinstance(value, np.ndarray) and value.ndim and len(value) == n and n != 1:
-            changed[f.name] = value[rows]
-        elif isinstance(value, np.ndarray) and n == 1 and f.name not in ("frame_a", "frame_b"):
+        if (isinstance(value, np.ndarray) and value.ndim and len(value) == n and n != 1) or (
+            isinstance(value, np.ndarray) and n == 1 and f.name not in ("frame_a", "frame_b")
+        ):
             changed[f.name] = value[rows]
     s = block.source
     changed["source"] = Provenance(s.files, s.file[rows], s.row[rows])
@@ -207,7 +220,7 @@ def calibration_step(system: System, state: State, robot: int) -> Floats:
 
 def whitened_norm(whitened: Floats) -> Floats:
     """Norm (n,) of whitened residuals (n, m)."""
-    return np.sqrt(np.einsum("nm,nm->n", whitened, whitened))
+    return np.asarray(np.sqrt(np.einsum("nm,nm->n", whitened, whitened)))
 
 
 def whitened_residual(system: System, part: Part, state: State) -> Floats:
@@ -233,9 +246,7 @@ def cost(system: System, state: State) -> float:
     return total
 
 
-def link_rows(
-    system: System, state: State, *, jacobians: bool = True
-) -> list[tuple[Ints, Rows]]:
+def link_rows(system: System, state: State, *, jacobians: bool = True) -> list[tuple[Ints, Rows]]:
     """Whitened rows of the links, in groups: which links (k,), and their rows.
 
     Two poses are tied as poses, everything else by position.
@@ -273,9 +284,7 @@ def _pose_links(system: System, state: State, rows: Ints, jacobians: bool) -> Ro
     if not jacobians:
         return Rows([], [], rhs)
     assert lin.jac_a is not None and lin.jac_b is not None
-    return Rows(
-        _link_keys(system, rows), [lin.jac_b / links.sigma, lin.jac_a / links.sigma], rhs
-    )
+    return Rows(_link_keys(system, rows), [lin.jac_b / links.sigma, lin.jac_a / links.sigma], rhs)
 
 
 def _point_links(system: System, state: State, rows: Ints, jacobians: bool) -> Rows:
@@ -299,7 +308,7 @@ def _half_links(system: System, state: State, rows: Ints, jacobians: bool) -> Ro
 
 def _prior_residual(system: System, state: State, robot: int) -> Floats:
     now = system.calibration_offset[robot] + calibration_step(system, state, robot)
-    return now / system.calibration_prior[robot]
+    return np.asarray(now / system.calibration_prior[robot])
 
 
 @dataclass(frozen=True)
@@ -312,7 +321,9 @@ class LinearisedSystem:
     weights: tuple[Floats, ...]
 
 
-def part_rows(system: System, part: Part, state: State, weight: Floats | None = None) -> tuple[Rows, Floats]:
+def part_rows(
+    system: System, part: Part, state: State, weight: Floats | None = None
+) -> tuple[Rows, Floats]:
     """Whitened (and weighted) rows of a part, and the whitened residual (n, m) before weighting."""
     lin = linearise(system, part, state)
     w = part.whiten

@@ -1,0 +1,1 @@
+"""Solution -> uncertainty: covariances, redundancy, noise components, datum, trust."""

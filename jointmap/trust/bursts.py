@@ -72,7 +72,8 @@ def burst_moments(
         names = residual_names(part.block, problem.dimension)
         residual = np.linalg.solve(part.whiten, stats.whitened[:, :, None])[:, :, 0]
         for i, name in enumerate(names):
-            _component(out, problem, noise, part, stats, residual[:, i], i, name)
+            column = np.asarray(residual[:, i], dtype=np.float64)
+            _component(out, problem, noise, part, stats, column, i, name)
     return out
 
 
@@ -91,7 +92,8 @@ def _component(
     free = ~np.isfinite(block.sigma[:, column])
     if block.covariance is not None:
         free &= ~np.isfinite(block.covariance).all(axis=(1, 2))
-    if not free.any():
+    named = [noise.terms.get((robot, sensor, name, t)) for t in (*_WHITE, *_SHARED)]
+    if not free.any() or not any(t is not None and t.free for t in named):
         return
     distance2 = observed_range(block)[free] ** 2
     shapes = {"constant": np.ones(len(distance2)), "per_m": distance2}
@@ -152,7 +154,10 @@ def _shared_part(
 ) -> None:
     size = np.bincount(burst)
     mean = _median(residual, burst)
-    average = lambda values: np.bincount(burst, weights=values) / size  # noqa: E731
+
+    def average(values: Floats) -> Floats:
+        return np.asarray(np.bincount(burst, weights=values) / size)
+
     # The median of n Gaussian rows has pi/2 times the variance of their mean (large n).
     spread = average(white) / size * np.where(size > 2, np.pi / 2, 1.0)
     total = average(shared) + spread

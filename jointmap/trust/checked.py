@@ -103,7 +103,9 @@ def _target(part: Part) -> Ints:
     return -1 - np.arange(len(part.index)) - (1 << 40)
 
 
-def _stretches(t_s: Floats, at: Ints, target: Ints, drift2: Floats, sigma: Floats) -> tuple[Ints, Ints]:
+def _stretches(
+    t_s: Floats, at: Ints, target: Ints, drift2: Floats, sigma: Floats
+) -> tuple[Ints, Ints]:
     """Codes (k,) of one robot's keyframes and of the stretch behind each.
 
     ``at`` (e,) keyframe of each checked observation, in order; ``target`` (e,) what it looked at.
@@ -168,6 +170,8 @@ def _landmarks(
         np.add.at(counts, system.links.shared, counts[system.links.own])
         counts[system.links.own] = counts[system.links.shared]
     code = np.where(
-        (best > WEAK) & (bursts > 1), CHECKED_CODE, np.where(best > UNCHECKED, WEAK_CODE, UNCHECKED_CODE)
+        (best > WEAK) & (bursts > 1),
+        CHECKED_CODE,
+        np.where(best > UNCHECKED, WEAK_CODE, UNCHECKED_CODE),
     )
     return code.astype(np.int64), seeing

@@ -129,7 +129,7 @@ def _without_tilt(
     residual = np.einsum("nij,nj->ni", back, stats.whitened)[:, keep]
     left = (back @ stats.redundancy @ np.swapaxes(back, 1, 2))[:, keep[:, None], keep]
     covariance = (back @ np.swapaxes(back, 1, 2))[:, keep[:, None], keep]
-    again = whitening(covariance)
+    again = whitening(np.asarray(covariance, dtype=np.float64))
     return (
         again,
         shapes[:, :, keep[:, None], keep],

@@ -34,8 +34,9 @@ Bools = NDArray[np.bool_]
 class Expressed:
     """State and covariances in the frame and datum asked for.
 
-    ``state`` moved by ``shift`` (C, *shape) of each component; ``pose_cov`` (K, dof, dof) body tangents; ``next_cov`` (K, dof, dof) cross
-    covariance of each keyframe with the next one of its robot (zero at the last);
+    ``state`` moved by ``shift`` (C, *shape) of each component; ``pose_cov`` (K, dof, dof) body
+    tangents; ``next_cov`` (K, dof, dof) cross covariance of each keyframe with the next one of its
+    robot (zero at the last);
     ``landmark_cov`` (L, d, d) with d = dof for oriented ones' own rows, NaN where absent;
     ``carries`` (L,) landmarks that carry the datum; ``component`` (C,) anchors;
     ``words`` says per component what the datum is.
@@ -77,9 +78,7 @@ def express(
     layout, k = system.layout, system.layout.n_keyframes
     component = np.full(layout.n, -1, dtype=np.int64)
     component[: len(gauge.component)] = gauge.component
-    weights, carries, words = _weights(
-        problem, system, trust, component, anchors, to_site, kind
-    )
+    weights, carries, words = _weights(problem, system, trust, component, anchors, to_site, kind)
     null = _null(problem, system, state)
     site_rows = np.isin(np.repeat(component, layout.dims), np.flatnonzero(to_site))
     null[site_rows] = 0.0
@@ -115,9 +114,7 @@ def _shift(problem: Problem, state: State, anchors: Ints, to_site: Bools) -> Flo
     return np.asarray(shift)
 
 
-def _move(
-    problem: Problem, system: System, state: State, component: Ints, shift: Floats
-) -> State:
+def _move(problem: Problem, system: System, state: State, component: Ints, shift: Floats) -> State:
     group = frames.group(problem.dimension)
     k = system.layout.n_keyframes
     poses = group.compose(shift[component[:k]], state.poses[:k])
@@ -196,7 +193,8 @@ def _weights(
             weights += position_weights(layout.dims, problem.dimension, k + mine)
             carries[index[mine]] = True
             words.append(
-                f"inner constraints over {len(mine)} landmarks, coordinates from the first pose of {name}"
+                f"inner constraints over {len(mine)} landmarks, "
+                f"coordinates from the first pose of {name}"
             )
         else:
             keys = np.flatnonzero(component[:k] == c)
@@ -239,4 +237,5 @@ def _landmark_covariance(
 def position_sigma(covariance: Floats, dimension: int) -> Floats:
     """Standard deviation (n,) of position in its worst direction, from body-tangent blocks."""
     place = slice(0, 2) if dimension == 2 else slice(3, 6)
-    return np.sqrt(np.maximum(np.linalg.eigvalsh(covariance[:, place, place])[:, -1], 0.0))
+    worst = np.linalg.eigvalsh(covariance[:, place, place])[:, -1]
+    return np.asarray(np.sqrt(np.maximum(worst, 0.0)), dtype=np.float64)

@@ -64,9 +64,7 @@ def association_evidence(
     )
 
 
-def joint_positions(
-    system: System, state: State, quality: Quality, a: Ints, b: Ints
-) -> Floats:
+def joint_positions(system: System, state: State, quality: Quality, a: Ints, b: Ints) -> Floats:
     """Joint covariance (n, 2 dim, 2 dim) of the positions of landmark pairs, map axes."""
     dim = system.problem.dimension
     n = len(a)

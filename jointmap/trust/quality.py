@@ -35,7 +35,7 @@ class PartQuality:
     @property
     def numbers(self) -> Floats:
         """Redundancy number (n, m) of every row."""
-        return np.clip(np.einsum("nii->ni", self.redundancy), 0.0, 1.0)
+        return np.asarray(np.clip(np.einsum("nii->ni", self.redundancy), 0.0, 1.0))
 
     def statistic(self) -> tuple[Floats, Floats]:
         """Test statistic T (n,) and its degrees of freedom (n,), 0 where nothing checks."""

@@ -207,9 +207,13 @@ class _Maker:
         bad = self.rng.random(len(x)) < o.gross
         for name in components:
             angle = name.endswith("rad")
-            value = exact[name] + self.rng.normal(size=len(x)) * (o.sigma_angle if angle else o.sigma)
+            value = exact[name] + self.rng.normal(size=len(x)) * (
+                o.sigma_angle if angle else o.sigma
+            )
             value[bad] += self.rng.normal(size=bad.sum()) * (0.7 if angle else 3.0)
-            columns.append(frames.wrap(value) if angle else np.abs(value) if name == "range_m" else value)
+            columns.append(
+                frames.wrap(value) if angle else np.abs(value) if name == "range_m" else value
+            )
         return np.stack(columns, axis=1)
 
     def sightings(self) -> tuple[Tracks, NDArray[np.int64], NDArray[np.bool_]]:
@@ -288,7 +292,9 @@ class _Maker:
         obs = self.lie.retract(obs, self.rng.normal(size=(len(a), self.lie.dof)) * sigma)
         bad = np.flatnonzero(self.rng.random(len(a)) < wrong)
         scatter = np.full(self.lie.dof, 2.0)
-        obs[bad] = self.lie.retract(obs[bad], self.rng.normal(size=(len(bad), self.lie.dof)) * scatter)
+        obs[bad] = self.lie.retract(
+            obs[bad], self.rng.normal(size=(len(bad), self.lie.dof)) * scatter
+        )
         return obs, np.broadcast_to(np.diag(sigma**2), (len(a), *[self.lie.dof] * 2))
 
     def closures(self) -> None:
@@ -326,7 +332,9 @@ class _Maker:
             robot = NAMES[block.robot] if block.robot >= 0 else ""
             if block.kind == "odometry":
                 for name in ODOMETRY_TERMS:
-                    terms.append(NoiseTerm(robot, "", "odometry", name, nan, 0.0, nan, nan, "given"))
+                    terms.append(
+                        NoiseTerm(robot, "", "odometry", name, nan, 0.0, nan, nan, "given")
+                    )
                 continue
             for name in residual_names(block, self.o.dimension):
                 value = self.o.sigma_angle if name.endswith("rad") else self.o.sigma

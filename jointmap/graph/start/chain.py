@@ -60,7 +60,8 @@ class Matches:
 @dataclass(frozen=True)
 class Chained:
     """Anchor poses (C, *shape), each run in its own frame (the first anchor of the run is where
-    dead reckoning has it), and per chunk how many statements agreed, by which the map was met."""
+    dead reckoning has it), and per chunk how many statements agreed, by which the map was met.
+    """
 
     poses: Floats
     agreed: Ints

@@ -55,7 +55,8 @@ class UnitLink:
 @dataclass(frozen=True)
 class Teams:
     """Group of each unit (U,), pose (U, *shape) of each unit in its group with the covariance
-    (U, dof, dof) that the links to it leave (body tangent), links made."""
+    (U, dof, dof) that the links to it leave (body tangent), links made.
+    """
 
     group: Ints
     pose: Floats

@@ -137,7 +137,7 @@ def chance_of_agreement(
     limit, total = chi2.ppf(gate, d), float(crossed.sum())
     near = float((distance[crossed] <= limit).sum()) / total
     wide = (float((distance[crossed] <= limit * WIDE**2).sum()) + 1.0) / total / WIDE**d
-    return min(max(near, wide), 1.0)
+    return float(min(max(near, wide), 1.0))
 
 
 def expected_accidents(n: int, support: int, chance: float, pair_rate: float, sample: int) -> float:
