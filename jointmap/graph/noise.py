@@ -239,11 +239,12 @@ def term_shapes(
         full: Bools = np.asarray(np.isfinite(block.covariance).all(axis=(1, 2)))
         stated[full] = block.covariance[full]
         own = np.asarray(own | full[:, None])
-    free = ~own
+    free: Bools = np.asarray(~own)
     if block.kind == "odometry":
         assert block.odometry_basis is not None
         terms = [noise.terms[(robot, "", "odometry", name)] for name in ODOMETRY_TERMS]
-        shapes = np.moveaxis(block.odometry_basis, 1, 0) * free.all(axis=1)[None, :, None, None]
+        whole: Bools = np.asarray(free.all(axis=1))
+        shapes = np.moveaxis(block.odometry_basis, 1, 0) * whole[None, :, None, None]
         return terms, shapes, stated
     sensor = block.sensor or block.kind
     names = residual_names(block, problem.dimension)

@@ -22,7 +22,9 @@ COMMAND = [sys.executable, "-m", "jointmap"]
 #: The command line with a fusion that sleeps, announced by the file named first.
 SLEEPER = textwrap.dedent(
     """
-    import pathlib, sys, time, types
+    import pathlib, signal, sys, time, types
+    # A shell that starts this in the background leaves the interrupt ignored.
+    signal.signal(signal.SIGINT, signal.default_int_handler)
     ready = pathlib.Path(sys.argv.pop(1))
     def fuse(survey, settings, progress):
         progress.stage("solve", 1000)
