@@ -30,9 +30,11 @@ from jointmap.products.assemble import assemble
 from jointmap.products.reference import Reference
 from jointmap.progress import Progress, Silent
 from jointmap.settings import Settings
+from jointmap.solve import gnc
 from jointmap.solve.associations import Review, review
 from jointmap.solve.decisions import Decisions, gate_rows, statistic_scale
-from jointmap.solve.kernels import Kernel
+from jointmap.solve.graduate import graduate
+from jointmap.solve.kernels import Kernel, RobustLoss
 from jointmap.solve.linear import Ordering, system_order
 from jointmap.solve.optimise import Optimised, OptimiseSettings, optimise
 from jointmap.solve.session import (
@@ -168,9 +170,7 @@ def _drop_loose(run: _Run) -> None:
 
 
 def _system(run: _Run, *, robust: bool, used: tuple[Bools, ...] | None = None) -> System:
-    kernel = None
-    if robust and run.settings.kernel != "none":
-        kernel = Kernel(run.settings.kernel, run.settings.kernel_constant)
+    kernel = _robust_loss(run.settings) if robust else None
     whiten = whiten_blocks(run.problem, run.noise)
     if run.sensitivity is None:
         run.sensitivity = odometry_sensitivity(run.problem, run.survey, run.calibration)
@@ -178,6 +178,15 @@ def _system(run: _Run, *, robust: bool, used: tuple[Bools, ...] | None = None) -
     return system_of(
         run.problem, whiten, decisions, run.state, kernel, run.sensitivity, run.calibration
     )
+
+
+def _robust_loss(settings: Settings) -> RobustLoss | None:
+    if settings.kernel == gnc.NAME:
+        # Where the schedule of graduated non-convexity ends; later solves start there.
+        return gnc.Graduated(np.inf, settings.kernel_constant)
+    if settings.kernel == "none":
+        return None
+    return Kernel(settings.kernel, settings.kernel_constant)
 
 
 def _optimise(run: _Run, system: System, relative: float) -> Optimised:
@@ -218,10 +227,25 @@ def _absorb(run: _Run, done: Optimised) -> float:
 def _robust(run: _Run) -> None:
     """Robust solves until the odometry calibration stands still, then a first inlier set."""
     run.progress.stage("robust solve")
+    if run.settings.kernel == gnc.NAME:
+        _absorb(run, _graduate(run))
     for _ in range(4 if calibrated_robots(run.calibration) else 1):
         if _absorb(run, _optimise(run, _system(run, robust=True), 1e-3)) < 0.02:
             break
     _gate_by_norm(run, _system(run, robust=True))
+
+
+def _graduate(run: _Run) -> Optimised:
+    """Solution of graduated non-convexity; short solves, since the next stage moves on anyway."""
+    system = _system(run, robust=True)
+    ordering, stages = _ordering(run, system), [0]
+
+    def solve(system: System, state: State) -> Optimised:
+        stages[0] += 1
+        run.progress.update(stages[0], "graduated non-convexity")
+        return optimise(system, state, OptimiseSettings(iterations=10, relative=1e-3), ordering)
+
+    return graduate(system, run.state, solve)
 
 
 def _gate_by_norm(run: _Run, system: System) -> None:

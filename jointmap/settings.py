@@ -12,7 +12,9 @@ from typing import Any, Literal
 
 from jointmap.errors import SettingsError
 
-Kernel = Literal["none", "huber", "cauchy", "welsch", "tukey", "dcs", "geman-mcclure", "truncated"]
+Kernel = Literal[
+    "none", "huber", "cauchy", "welsch", "tukey", "dcs", "geman-mcclure", "truncated", "gnc"
+]
 DatumKind = Literal["landmarks", "robot", "control"]
 NoiseMode = Literal["given", "estimated"]
 
@@ -26,6 +28,7 @@ KERNELS: tuple[str, ...] = (
     "dcs",
     "geman-mcclure",
     "truncated",
+    "gnc",
 )
 DATUMS: tuple[str, ...] = ("landmarks", "robot", "control")
 NOISE_MODES: tuple[str, ...] = ("given", "estimated")
@@ -41,9 +44,11 @@ class Settings:
     Parameters
     ----------
     kernel : str
-        Robust kernel of the measurements, one of ``KERNELS``.
+        Robust kernel of the measurements, one of ``KERNELS``; ``gnc``: graduated non-convexity
+        with truncated least squares, which needs no good start but many more solves.
     kernel_constant : float or None
-        Tuning constant in whitened units; None: the kernel's own default.
+        Tuning constant of a scalar residual in whitened units (rows of more components take a
+        larger one, see :mod:`jointmap.solve.kernels`); None: the kernel's own default.
     datum : str or None
         ``landmarks``, ``robot`` or ``control``; None: what the survey says.
     datum_robot : str or None

@@ -1,4 +1,4 @@
-"""Graduated non-convexity: the schedule, as pure functions of squared whitened residuals.
+"""Graduated non-convexity: the schedule, and the loss of one of its rounds.
 
 A robust loss with inlier limit ``c`` is replaced by a family that a parameter ``mu`` leads from
 convex to the loss itself. With ``r2`` the squared whitened norm of a row:
@@ -15,10 +15,14 @@ done                     every weight is 0 or 1            mu is 1
 ======================== ================================= ===============================
 
 The loop is: solve with all weights 1, start ``mu`` from the residuals; then weigh, solve, advance
-until done. Every row has its own ``c`` (it depends on the number of components), so ``mu`` starts
-from the row that is furthest out in units of its own limit. Rows known to be right (odometry) keep
-weight 1 and do not set ``mu``. What the method cannot do: a row without redundancy has a small
-residual however wrong it is, and a sigma that is wrong by two moves the limit by four.
+until done (:mod:`jointmap.solve.graduate`). Rows known to be right (odometry) keep weight 1 and do
+not set ``mu``. What the method cannot do: a row without redundancy has a small residual however
+wrong it is, and a sigma that is wrong by two moves the limit by four.
+
+**Dimension.** The limit goes with the number ``d`` of components of a row: ``c^2`` is the 99 % point
+of chi-square with ``d`` degrees of freedom. A constant given by the user is ``c`` of a scalar
+residual, and the limits of other rows keep their ratio to it. ``mu`` starts from the row that is
+furthest out in units of its own limit.
 
 References
 ----------
@@ -29,6 +33,7 @@ Letters 5(2), 1127-1134.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
@@ -40,6 +45,8 @@ Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 Loss = Literal["truncated", "geman-mcclure"]
 
+#: Name of the method among the kernels of the settings.
+NAME = "gnc"
 #: Pace of the schedule.
 STEP = 1.4
 #: ``mu`` of the truncated loss never starts below this (a residual 700 times its limit): the loss
@@ -103,3 +110,48 @@ def finished(loss: Loss, mu: float, weight: Floats, tolerance: float = 1e-4) -> 
     if loss == "geman-mcclure":
         return mu <= 1.0
     return bool(np.all((weight <= tolerance) | (weight >= 1.0 - tolerance)))
+
+
+@dataclass(frozen=True)
+class Graduated:
+    """Truncated least squares at one stage ``mu`` of the schedule, as a kernel.
+
+    Parameters
+    ----------
+    mu : float
+        Infinite: the truncated loss itself.
+    constant : float or None
+        Limit ``c`` of a scalar residual; None: its 99 % point.
+
+    Notes
+    -----
+    The weights are those of the table; the loss whose reweighting they are (equation 9 of the
+    paper, halved and shifted to start from zero) is ``x^2 / 2`` up to ``mu / (mu + 1) c^2``,
+    ``c^2 / 2`` from ``(mu + 1) / mu c^2``, and between them
+    ``c x sqrt(mu (mu + 1)) - mu (c^2 + x^2) / 2``.
+    """
+
+    mu: float
+    constant: float | None = None
+
+    def limit(self, d: int) -> float:
+        """Squared limit ``c^2`` of rows with ``d`` components."""
+        own = float(inlier_limit(d))
+        return own if self.constant is None else self.constant**2 * own / float(inlier_limit(1))
+
+    def weight(self, norm: Floats, d: int) -> Floats:
+        """Weight (n,) in [0, 1] of whitened norms (n,) of residuals with ``d`` components."""
+        squared = np.square(np.asarray(norm, dtype=np.float64))
+        if np.isinf(self.mu):
+            return np.asarray((squared <= self.limit(d)).astype(np.float64))
+        return weights("truncated", squared, self.limit(d), self.mu)
+
+    def loss(self, norm: Floats, d: int) -> Floats:
+        """Loss (n,) of whitened norms (n,) of residuals with ``d`` components."""
+        x = np.abs(np.asarray(norm, dtype=np.float64))
+        c2, mu = self.limit(d), self.mu
+        if np.isinf(mu):
+            return np.asarray(0.5 * np.minimum(x * x, c2))
+        middle = np.sqrt(c2 * mu * (mu + 1.0)) * x - 0.5 * mu * (c2 + x * x)
+        out = np.where(x * x <= mu / (mu + 1.0) * c2, 0.5 * x * x, middle)
+        return np.asarray(np.where(x * x >= (mu + 1.0) / mu * c2, 0.5 * c2, out))

@@ -30,6 +30,12 @@ freedom (Maronna 1976; the mean derivative of the score is ``E[r psi] / d`` by S
 For ``d = 1`` this is the textbook constant (1.345, 2.385, 4.685, 2.985 …). With the scalar constant
 the efficiency for six components would be 0.93 (Huber, Cauchy), 0.82 (Tukey), 0.55 (truncated).
 
+**Dimension.** A kernel acts on the norm of the whole whitened residual of a row, never component by
+component. So a row of ``d`` components takes the constant of its ``d`` from ``CONSTANTS``; a
+constant given by the user is that of a scalar residual, and a row of ``d`` components takes it
+times ``CONSTANTS[name][d - 1] / CONSTANTS[name][0]``. Graduated non-convexity scales by chi-square
+quantiles instead: see :mod:`jointmap.solve.gnc`.
+
 References
 ----------
 Holland, P. W., Welsch, R. E. (1977). Robust regression using iteratively reweighted least-squares.
@@ -42,7 +48,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Protocol
 
 import gtsam
 import numpy as np
@@ -63,6 +69,16 @@ CONSTANTS: dict[str, tuple[float, ...]] = {
     "truncated": (2.7954835, 3.0802157, 3.3272357, 3.5484627, 3.7506187, 3.9379326),
 }
 NAMES = ("none", *CONSTANTS)
+
+
+class RobustLoss(Protocol):
+    """What a solve asks of a kernel: loss and weight of whitened norms of ``d`` components."""
+
+    def loss(self, norm: Floats, d: int) -> Floats:
+        """Loss rho (n,) of whitened norms (n,)."""
+
+    def weight(self, norm: Floats, d: int) -> Floats:
+        """Weight rho'(x) / x (n,) of whitened norms (n,), in [0, 1]."""
 
 
 @dataclass(frozen=True)

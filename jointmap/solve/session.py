@@ -17,7 +17,7 @@ from jointmap.graph.calibrate import Calibration
 from jointmap.graph.noise import Noise, block_covariance, whitening
 from jointmap.graph.problem import Assignment, Block, Problem, State
 from jointmap.solve.decisions import Decisions
-from jointmap.solve.kernels import Kernel
+from jointmap.solve.kernels import Kernel, RobustLoss
 from jointmap.solve.layout import n_landmarks
 from jointmap.solve.system import System, make_system, part_rows
 
@@ -95,7 +95,7 @@ def system_of(
     whiten: tuple[Floats, ...],
     decisions: Decisions,
     state: State,
-    kernel: Kernel | None,
+    kernel: RobustLoss | None,
     sensitivity: Mapping[int, Floats],
     calibration: Calibration,
 ) -> System:
@@ -123,7 +123,7 @@ def system_of(
     )
 
 
-def _kernel(kernel: Kernel | None, block: Block) -> Kernel | None:
+def _kernel(kernel: RobustLoss | None, block: Block) -> RobustLoss | None:
     """The measurements' kernel; a convex one for odometry.
 
     A redescending kernel on odometry would rather let the robot jump than give up a wrong

@@ -26,7 +26,7 @@ from jointmap.solve.gauge import (
     point_motion,
     pose_motion,
 )
-from jointmap.solve.kernels import Kernel
+from jointmap.solve.kernels import RobustLoss
 from jointmap.solve.layout import (
     Layout,
     landmark_of_rows,
@@ -71,7 +71,7 @@ class Part:
     block: Block
     index: Ints
     whiten: Floats
-    kernel: Kernel | None
+    kernel: RobustLoss | None
     key_a: Ints
     key_b: Ints
     landmark: Ints | None
@@ -112,7 +112,7 @@ def make_system(
     assignment: Assignment,
     used: tuple[Bools, ...],
     whiten: tuple[Floats, ...],
-    kernels: tuple[Kernel | None, ...],
+    kernels: tuple[RobustLoss | None, ...],
     sensitivity: Mapping[int, Floats] | None = None,
     calibration_offset: Floats | None = None,
     calibration_prior: Floats | None = None,
@@ -180,7 +180,7 @@ def _part(
     block: Block,
     index: Ints,
     whiten: Floats,
-    kernel: Kernel | None,
+    kernel: RobustLoss | None,
     landmark: Ints | None,
     layout: Layout,
 ) -> Part:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import gtsam
 import numpy as np
 import pytest
+from scipy.stats import chi2
 
 from jointmap.solve import gnc
 
@@ -145,3 +146,34 @@ def test_verdicts_equal_gtsam() -> None:
         at = w @ observed / w.sum()
     np.testing.assert_allclose(at, theirs, atol=1e-6)
     np.testing.assert_allclose(w, optimizer.getWeights(), atol=1e-4)
+
+
+@pytest.mark.parametrize("mu", [0.01, 1.0, 30.0])
+@pytest.mark.parametrize("d", [1, 2, 6])
+def test_loss_of_a_stage_belongs_to_its_weights(mu: float, d: int) -> None:
+    """w = rho' / x by central differences; rho is continuous and ends at c^2 / 2."""
+    stage = gnc.Graduated(mu)
+    c2 = stage.limit(d)
+    assert c2 == pytest.approx(chi2.ppf(0.99, d))
+    corners = np.sqrt(c2 * np.array([mu / (mu + 1.0), (mu + 1.0) / mu]))
+    x = np.linspace(0.01, 1.2 * corners[1], 211)
+    x = x[np.abs(x[:, None] - corners).min(axis=1) > 1e-3]
+    slope = (stage.loss(x + 1e-6, d) - stage.loss(x - 1e-6, d)) / 2e-6
+    np.testing.assert_allclose(stage.weight(x, d), slope / x, atol=1e-5)
+    assert stage.loss(np.array([2.0 * corners[1]]), d)[0] == pytest.approx(0.5 * c2)
+    for corner in corners:
+        below, above = stage.loss(np.array([corner - 1e-9, corner + 1e-9]), d)
+        assert above - below == pytest.approx(0.0, abs=1e-7)
+
+
+def test_last_stage_is_truncated_least_squares() -> None:
+    x = np.array([0.0, 1.0, 2.5, 2.6, 40.0])
+    last, nearly = gnc.Graduated(np.inf), gnc.Graduated(1e9)
+    np.testing.assert_allclose(last.weight(x, 1), [1, 1, 1, 0, 0])
+    np.testing.assert_allclose(last.loss(x, 1), nearly.loss(x, 1), rtol=1e-6)
+
+
+def test_limits_keep_their_ratio_to_a_given_constant() -> None:
+    stage = gnc.Graduated(1.0, 2.0)
+    assert stage.limit(1) == pytest.approx(4.0)
+    assert stage.limit(3) / stage.limit(1) == pytest.approx(chi2.ppf(0.99, 3) / chi2.ppf(0.99, 1))

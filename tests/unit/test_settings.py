@@ -6,12 +6,13 @@ import json
 import math
 import re
 from importlib.metadata import version
-from typing import Any
+from typing import Any, get_args
 
 import pytest
 
 from jointmap.errors import SettingsError
-from jointmap.settings import KERNELS, Settings, environment_versions
+from jointmap.settings import KERNELS, Kernel, Settings, environment_versions
+from jointmap.solve import gnc, kernels
 
 
 def test_defaults_survive_json() -> None:
@@ -84,8 +85,10 @@ def test_unknown_names_are_refused() -> None:
 
 
 def test_kernels_are_those_of_the_solver() -> None:
-    kernels = pytest.importorskip("jointmap.solve.kernels")
-    assert sorted(KERNELS) == sorted(kernels.NAMES)
+    assert get_args(Kernel) == KERNELS
+    assert sorted(KERNELS) == sorted((*kernels.NAMES, gnc.NAME))
+    offered = {"huber", "cauchy", "geman-mcclure", "tukey", "welsch", "gnc"}
+    assert offered <= set(KERNELS)
 
 
 def test_workers_are_at_least_one() -> None:
