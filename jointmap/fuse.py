@@ -13,7 +13,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from jointmap.errors import SurveyError
+from jointmap.errors import IndeterminateError, SurveyError
 from jointmap.graph.build import BuildSettings, build_problem
 from jointmap.graph.calibrate import (
     Calibration,
@@ -46,6 +46,7 @@ from jointmap.solve.session import (
 )
 from jointmap.solve.system import Part, System, linearise, linearise_system, whitened_norm
 from jointmap.trust.components import update_noise
+from jointmap.trust.loose import find_loose
 from jointmap.trust.outcome import Outcome, association_evidence
 from jointmap.trust.quality import Quality, assess
 
@@ -99,13 +100,14 @@ def fuse(
     ------
     SurveyError
         The survey has nothing to solve.
+    IndeterminateError
+        The measurements leave something undetermined that leaving out loose ties does not mend;
+        names robot and time, or the landmark.
     """
     settings = settings or Settings()
     progress = progress or Silent()
     run = _prepare(survey, settings, progress)
-    _robust(run)
-    settled = _rounds(run)
-    system, done, quality = _final(run)
+    settled, system, done, quality = _solved(run)
     progress.stage("products")
     outcome = Outcome(
         survey=survey,
@@ -125,6 +127,46 @@ def fuse(
     reference = assemble(outcome, settings, progress)
     progress.finish()
     return reference
+
+
+def _solved(run: _Run) -> tuple[bool, System, Optimised, Quality]:
+    """All solves; where the system turns out singular, once more without the ties that are loose.
+
+    Returns whether noise and decisions settled, the last system, its solution and quality.
+    """
+    while True:
+        try:
+            _robust(run)
+            settled = _rounds(run)
+            return settled, *_final(run)
+        except IndeterminateError as error:
+            _cut_loose(run, error)
+
+
+def _cut_loose(run: _Run, error: IndeterminateError) -> None:
+    """Leave out what ties a loose part to the rest, or what does not place its landmark.
+
+    Raises
+    ------
+    IndeterminateError
+        There is nothing to leave out; names what is loose.
+    """
+    loose = find_loose(_system(run, robust=False), run.state)
+    forced = run.problem.tracks.forced[loose.links]
+    if not loose.cuttable or forced.any():
+        why = "; an association that edits.toml forces is its only tie" if forced.any() else ""
+        raise IndeterminateError(f"the measurements do not determine {loose.words}{why}") from error
+    before = run.decisions
+    accepted = before.accepted.copy()
+    accepted[loose.links] = False
+    usable = tuple(a & ~rows for a, rows in zip(before.usable, loose.rows, strict=True))
+    used = tuple(a & ~rows for a, rows in zip(before.used, loose.rows, strict=True))
+    run.decisions = replace(before, accepted=accepted, usable=usable, used=used)
+    _place_shared(run)
+    n = sum(int(rows.sum()) for rows in loose.rows)
+    what = [f"{len(loose.links)} associations"] if len(loose.links) else []
+    what += [f"{n} measurements"] if n else []
+    run.notes.append(f"{' and '.join(what)} do not determine {loose.words}; left out")
 
 
 def _prepare(survey: Survey, settings: Settings, progress: Progress) -> _Run:

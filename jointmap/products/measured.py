@@ -24,6 +24,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 _MDB = ("range_m", "bearing_rad", "x_m", "y_m", "z_m", "elevation_rad")
+_LOOSE = "it ties two parts without saying where one is relative to the other"
 _PLAIN = {
     "range_m": "range",
     "bearing_rad": "bearing",
@@ -108,7 +109,7 @@ def _block_frame(
             "redundancy": redundancy,
             "w": np.where(usable, statistic, np.nan),
             "verdict": verdict,
-            "reason": _reasons(block, dimension, verdict, whitened),
+            "reason": _reasons(block, dimension, verdict, whitened, _placed(outcome, block)),
         }
     )
 
@@ -201,8 +202,20 @@ def _landmarks(problem: Problem, block: Block, names: NDArray[np.object_]) -> An
     return None
 
 
+def _placed(outcome: Outcome, block: Block) -> NDArray[np.bool_]:
+    """Rows (n,) of sightings whose landmark has a place from others."""
+    if block.kind != "sighting":
+        return np.zeros(block.n, dtype=bool)
+    key = outcome.system.layout.key_of_landmark
+    return key[own_landmarks(outcome.problem).landmark[block.b]] >= 0
+
+
 def _reasons(
-    block: Block, dimension: int, verdict: NDArray[np.object_], whitened: Floats
+    block: Block,
+    dimension: int,
+    verdict: NDArray[np.object_],
+    whitened: Floats,
+    placed: NDArray[np.bool_],
 ) -> NDArray[np.object_]:
     out = np.full(block.n, None, dtype=object)
     doubted = np.flatnonzero((verdict == "rejected") | (verdict == "down-weighted"))
@@ -215,6 +228,9 @@ def _reasons(
     lost = verdict == "unusable"
     if block.kind == "sighting":
         out[lost] = "its landmark is not determined by these sightings"
+        out[lost & placed] = _LOOSE
+    elif block.kind in ("encounter", "closure"):
+        out[lost] = _LOOSE
     elif block.kind == "control":
         out[lost] = "no robot saw this landmark"
     return out

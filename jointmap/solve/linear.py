@@ -44,6 +44,10 @@ class HasLayout(Protocol):
     def layout(self) -> Layout:
         """Numbering of its variables."""
 
+    @property
+    def component(self) -> Ints:
+        """Connected component (n,) of each variable but the calibration vectors."""
+
 
 @dataclass
 class LinearGraph:
@@ -80,7 +84,23 @@ class LinearGraph:
 def system_order(system: HasLayout, graph: LinearGraph) -> gtsam.Ordering:
     """Ordering for a system: its calibration vectors last."""
     keys = system.layout.calibration_key
+    alone = np.flatnonzero(np.bincount(system.component)[system.component] == 1)
+    if len(alone):
+        # METIS reads beyond its arrays where a variable has no neighbour.
+        graph = _with_neighbours(graph, system.layout.dims, alone)
     return order(graph, keys[keys >= 0])
+
+
+def _with_neighbours(graph: LinearGraph, dims: Ints, alone: Ints) -> LinearGraph:
+    """A copy of a graph, to order by, where lonely variables have empty rows with another one."""
+    out = LinearGraph(gtsam.GaussianFactorGraph())
+    out.graph.push_back(graph.graph)
+    for key in alone.tolist():
+        other = key - 1 if key else min(1, len(dims) - 1)
+        if other != key:
+            a, b = (np.zeros((1, int(dims[k]))) for k in (key, other))
+            out.graph.push_back(gtsam.JacobianFactor(key, a, other, b, np.zeros(1), _UNIT[1]))
+    return out
 
 
 def order(graph: LinearGraph, last: Ints) -> gtsam.Ordering:
@@ -101,7 +121,7 @@ def eliminate(graph: LinearGraph, ordering: gtsam.Ordering) -> gtsam.GaussianBay
     Raises
     ------
     IndeterminateError
-        The system is singular; the message carries GTSAM's own hint (a key near the defect).
+        The system is singular.
     """
     try:
         return graph.graph.eliminateMultifrontal(ordering)
@@ -112,7 +132,8 @@ def eliminate(graph: LinearGraph, ordering: gtsam.Ordering) -> gtsam.GaussianBay
     try:
         return graph.graph.eliminateMultifrontal(ordering, gtsam.EliminateQR)
     except RuntimeError as error:
-        raise IndeterminateError(str(error)) from error
+        # GTSAM names a key near the defect; `jointmap.trust.loose` finds the variable itself.
+        raise IndeterminateError("the measurements leave a variable undetermined") from error
 
 
 def step(tree: gtsam.GaussianBayesTree) -> Floats:

@@ -169,6 +169,12 @@ def datum_transform(
     return DatumTransform(tree.offset, part, motion, cross)
 
 
+def holds(null: Floats, weights: Floats) -> bool:
+    """Whether a datum of weights (N,) holds every motion (N, q) of a component."""
+    basis = _orthonormal(null)
+    return _regular(basis.T @ (weights[:, None] * basis))
+
+
 def null_space(
     dims: ArrayLike,
     dimension: int,

@@ -126,7 +126,9 @@ def clique_tree(bayes_tree: Any, dims: ArrayLike) -> CliqueTree:
     return tree
 
 
-def loose_keys(graph: Any, dims: ArrayLike, count: int = 5, seed: int = 0) -> Ints:
+def loose_keys(
+    graph: Any, dims: ArrayLike, count: int = 5, seed: int = 0, least: float = 0.01
+) -> Ints:
     """Find the variables that the measurements leave undetermined, the loosest first.
 
     Parameters
@@ -137,6 +139,8 @@ def loose_keys(graph: Any, dims: ArrayLike, count: int = 5, seed: int = 0) -> In
         Tangent dimension of every key 0 .. n-1.
     count : int
         Number of keys to return at most.
+    least : float
+        Smallest squared movement of a key that is returned, as a share of the largest.
 
     Returns
     -------
@@ -152,7 +156,9 @@ def loose_keys(graph: Any, dims: ArrayLike, count: int = 5, seed: int = 0) -> In
     sizes = np.asarray(dims, np.int64)
     damped = _damped(graph.clone(), sizes)
     # QR, because GTSAM's Cholesky refuses pivots that differ by more than 2^12.
-    bayes_tree = damped.eliminateMultifrontal(metis_ordering(damped), gtsam.EliminateQR)
+    # COLAMD, because METIS fails on variables without a neighbour.
+    ordering = gtsam.Ordering.ColamdGaussianFactorGraph(damped)
+    bayes_tree = damped.eliminateMultifrontal(ordering, gtsam.EliminateQR)
     tree = clique_tree(bayes_tree, sizes)
     factor = SquareRootFactor(tree)
     vectors = np.random.default_rng(seed).standard_normal((int(sizes.sum()), 4))
@@ -160,7 +166,7 @@ def loose_keys(graph: Any, dims: ArrayLike, count: int = 5, seed: int = 0) -> In
         vectors = factor.solve(np.linalg.qr(vectors)[0])
     share = np.add.reduceat(np.sum(vectors**2, axis=1), np.cumsum(sizes) - sizes)
     order = np.argsort(-share, kind="stable")[:count]
-    return np.asarray(order[share[order] > 0.01 * share.max()], np.int64)
+    return np.asarray(order[share[order] > least * share.max()], np.int64)
 
 
 def _damped(graph: Any, dims: Ints) -> Any:

@@ -19,6 +19,7 @@ from jointmap.trust.checked import Trust
 from jointmap.trust.datum import (
     DatumTransform,
     datum_transform,
+    holds,
     null_space,
     pose_weights,
     position_weights,
@@ -78,10 +79,12 @@ def express(
     layout, k = system.layout, system.layout.n_keyframes
     component = np.full(layout.n, -1, dtype=np.int64)
     component[: len(gauge.component)] = gauge.component
-    weights, carries, words = _weights(problem, system, trust, component, anchors, to_site, kind)
     null = _null(problem, system, state)
     site_rows = np.isin(np.repeat(component, layout.dims), np.flatnonzero(to_site))
     null[site_rows] = 0.0
+    weights, carries, words = _weights(
+        problem, system, trust, component, anchors, to_site, kind, null
+    )
     transform = datum_transform(quality.factor, component, null, weights)
     keys = np.arange(k)
     pose_cov = transform.diagonal(keys, quality.inverse.diagonal(keys))
@@ -169,7 +172,13 @@ def _weights(
     anchors: Ints,
     to_site: Bools,
     kind: str,
+    null: Floats,
 ) -> tuple[Floats, Bools, tuple[str, ...]]:
+    """Datum weights (N,), landmarks (L,) that carry a datum, and words per component.
+
+    Landmarks first; the keyframes where these are too few or do not hold every motion (all in a
+    row, all in one place); the first pose where the keyframes do not either.
+    """
     layout, k = system.layout, system.layout.n_keyframes
     need = 2 if problem.dimension == 2 else 3
     carries = np.zeros(n_landmarks(problem), dtype=bool)
@@ -186,22 +195,35 @@ def _weights(
             continue
         name = problem.robots[problem.keyframes.robot[anchor]]
         mine = np.flatnonzero(good & (part == c))
+        free = null[np.repeat(component, layout.dims) == c]
+        by_landmarks = position_weights(layout.dims, problem.dimension, k + mine)
+        keys = np.flatnonzero(component[:k] == c)
+        by_keyframes = position_weights(layout.dims, problem.dimension, keys)
+        at = np.repeat(component, layout.dims) == c
         if kind == "robot":
             weights += pose_weights(layout.dims, np.array([anchor]))
             words.append(f"the first pose of {name} is exact")
-        elif len(mine) >= need:
-            weights += position_weights(layout.dims, problem.dimension, k + mine)
+        elif len(mine) >= need and holds(free, by_landmarks[at]):
+            weights += by_landmarks
             carries[index[mine]] = True
             words.append(
                 f"inner constraints over {len(mine)} landmarks, "
                 f"coordinates from the first pose of {name}"
             )
-        else:
-            keys = np.flatnonzero(component[:k] == c)
-            weights += position_weights(layout.dims, problem.dimension, keys)
+        elif holds(free, by_keyframes[at]):
+            weights += by_keyframes
             words.append(
                 "inner constraints over the keyframes, since fewer than "
                 f"{need} landmarks are seen often enough; coordinates from the first pose of {name}"
+                if len(mine) < need
+                else "inner constraints over the keyframes, since the landmarks seen often enough "
+                f"lie in a row; coordinates from the first pose of {name}"
+            )
+        else:
+            weights += pose_weights(layout.dims, np.array([anchor]))
+            words.append(
+                f"the first pose of {name} is exact, since neither landmarks nor keyframes spread "
+                "far enough to carry a datum"
             )
     carries[system.links.own] = False
     return weights, carries, tuple(words)
