@@ -170,10 +170,12 @@ class World:
         other: str,
         parts: Sequence[str] = ("range_m", "bearing_rad", "elevation_rad"),
         every_s: float = 5.0,
+        stamps: Sequence[float] | None = None,
     ) -> pd.DataFrame:
-        """The other robot's body origin, whenever asked."""
+        """The other robot's body origin, each ``every_s`` or at the stamps given."""
         rows = []
-        for t in np.arange(self.t_s[0] + 0.7 * every_s, self.t_s[-1], every_s):
+        regular = np.arange(self.t_s[0] + 0.7 * every_s, self.t_s[-1], every_s)
+        for t in regular if stamps is None else stamps:
             place = self.at(other, t)[:-1, -1]
             seen = self.polar(place, self.at(robot, t), parts)
             rows.append({"t_s": t, "sensor": "front", "robot": other, **seen})
