@@ -112,6 +112,10 @@ class Group(ABC):
         back = np.swapaxes(self.rotation(pose), -1, -2)
         return apply(back, floats(point) - self.translation(pose))
 
+    def table_axes(self, pose: ArrayLike) -> Floats:
+        """Orthogonal matrix (…, dof, dof) that turns body tangents into the order of tables."""
+        return self._table_axes(floats(pose))
+
     def covariance_to_table(self, pose: ArrayLike, covariance: ArrayLike) -> Floats:
         """Covariance (…, dof, dof) of the body tangent, as tables state it.
 

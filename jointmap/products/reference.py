@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Any
+from functools import cached_property
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pandas as pd
@@ -13,6 +14,9 @@ from numpy.typing import ArrayLike, NDArray
 from jointmap.products.columns import META_KEYS, STATUSES, TABLES, TRUST, table_columns
 from jointmap.products.interpolate import Poses, interpolate
 from jointmap.schema import pose_columns
+
+if TYPE_CHECKING:
+    from jointmap.products.joint import JointState
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -159,6 +163,45 @@ class Reference:
             known = ", ".join(self.trajectories)
             raise KeyError(f"no robot {robot!r} in this reference; it has {known}")
         return interpolate(self.trajectories[robot], t_s, self.outages(robot))
+
+    @cached_property
+    def joint(self) -> JointState:
+        """The stored state, ready for joint covariances of any poses and landmarks; read once.
+
+        Raises
+        ------
+        SurveyError
+            The reference was written without its state.
+        """
+        from jointmap.products.joint import JointState
+
+        return JointState.of(self)
+
+    def relative(self, a: tuple[str, ArrayLike], b: tuple[str, ArrayLike]) -> Poses:
+        """Pose of one robot in the body frame of another, or of itself at another time.
+
+        Parameters
+        ----------
+        a, b : (robot, t_s)
+            Robots and survey times; the times broadcast against each other.
+
+        Returns
+        -------
+        Poses
+            ``bodyA_T_bodyB`` as table rows with covariance in table order about the axes of body
+            a, cross-covariances included; independent of the datum. NaN with a ``reason`` where
+            either pose is unknown or no common frame holds both.
+
+        Raises
+        ------
+        KeyError
+            The reference has no such robot.
+        SurveyError
+            The reference was written without its state.
+        """
+        from jointmap.products.joint import relative_poses
+
+        return relative_poses(self.joint, a, b)
 
     def outages(self, robot: str) -> Floats:
         """Intervals (m, 2) in which the robot logged no odometry, survey time."""
