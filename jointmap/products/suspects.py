@@ -85,7 +85,9 @@ def _jumps(outcome: Outcome, measurements: pd.DataFrame) -> list[dict[str, Any]]
 def _bursts(outcome: Outcome, measurements: pd.DataFrame) -> list[dict[str, Any]]:
     rejected = measurements[
         (measurements["verdict"] == "rejected") & (measurements["kind"] != "odometry")
-    ]
+    ].copy()
+    control = rejected["kind"] == "control"
+    rejected.loc[control, "target"] = rejected.loc[control, "landmark"]
     if rejected.empty:
         return []
     groups = rejected.groupby(_BURST, dropna=False, sort=False)
@@ -106,16 +108,18 @@ def _bursts(outcome: Outcome, measurements: pd.DataFrame) -> list[dict[str, Any]
                 MaskEdit(robot, row.sensor, float(ends[0]) - 1e-3, float(ends[1]) + 1e-3)
             )
         target = row.target if isinstance(row.target, str) else ""
+        told = f"{target or str(row.kind)} by {robot} at {row.t_from_s:.3f} s ({row.n} rows)"
+        if row.kind == "control":
+            robot, told = "", f"control point {target}: its coordinates contradict the others"
         out.append(
             {
                 "kind": row.kind,
-                "robot": row.robot,
+                "robot": robot or None,
                 "t_from_s": row.t_from_s,
                 "t_to_s": row.t_to_s,
                 "target": target or None,
                 "statistic": row.w,
-                "reason": f"{target or str(row.kind)} by {robot} at {row.t_from_s:.3f} s"
-                f" ({row.n} rows): {row.reason}",
+                "reason": f"{told}: {row.reason}",
                 "edit": edit,
             }
         )

@@ -16,6 +16,7 @@ from jointmap.trust.outcome import Outcome
 UNCHECKED_SHARE = 0.5
 REJECTED_MEASUREMENTS = 0.2
 REJECTED_ASSOCIATIONS = 0.5
+REJECTED_CONTROL = 0.3
 #: Median statistic over its law beyond which stated sigmas are called wrong.
 STATED_FACTOR = 4.0
 
@@ -54,6 +55,7 @@ def judge(
     if not outcome.settled:
         reasons.append(("weak", "noise and decisions had not settled after the last round"))
     reasons += _rejections(associations, measurements)
+    reasons += _datum_missed(outcome, settings)
     for name, factor in _stated(outcome).items():
         reasons.append(
             (
@@ -105,7 +107,24 @@ def _rejections(associations: pd.DataFrame, measurements: pd.DataFrame) -> list[
         share = float((group["verdict"] == "rejected").mean())
         if share > REJECTED_MEASUREMENTS and len(group) >= 20:
             out.append(("weak", f"{share:.0%} of the {kind}s of {name} were rejected"))
+    control = measurements.loc[measurements["kind"] == "control", "verdict"]
+    tested, against = int((control != "unusable").sum()), int((control == "rejected").sum())
+    if against > REJECTED_CONTROL * tested:
+        out.append(("weak", f"{against} of {tested} control points contradict the others"))
     return out
+
+
+def _datum_missed(outcome: Outcome, settings: Settings) -> list[tuple[str, str]]:
+    """Robots whose result is not in the site frame although that was asked for."""
+    if (settings.datum or outcome.survey.datum_kind) != "control":
+        return []
+    gauge, problem = outcome.quality.gauge, outcome.problem
+    loose = gauge.free[gauge.component[problem.keyframes.first[:-1]]] > 0
+    names = ", ".join(name for name, out in zip(problem.robots, loose, strict=True) if out)
+    if not names:
+        return []
+    text = f"fixes and control points do not hold {names} in the site frame: too few, or rejected"
+    return [("weak", f"{text}; coordinates start at a first pose instead")]
 
 
 def _stated(outcome: Outcome) -> dict[str, float]:

@@ -28,7 +28,7 @@ Bools = NDArray[np.bool_]
 #: Standard deviation of "is the same landmark", far below what any sensor sees (metres).
 LINK_SIGMA = 2e-4
 #: Kinds that get the kernel in a robust solve.
-ROBUST = ("odometry", "sighting", "encounter", "closure", "fix")
+ROBUST = ("odometry", "sighting", "encounter", "closure", "fix", "control")
 
 
 def own_landmarks(problem: Problem) -> Assignment:
