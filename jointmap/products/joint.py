@@ -19,6 +19,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -31,6 +32,7 @@ from jointmap.trust.solve_pairs import SquareRootFactor
 
 if TYPE_CHECKING:
     from jointmap.products.reference import Reference
+    from jointmap.trust.marginals import SelectedInverse
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -172,6 +174,15 @@ class JointState:
             scale=np.ones(len(state["robots"])),
         )
         return replace(made, scale=made._scales())
+
+    @cached_property
+    def inverse(self) -> SelectedInverse:
+        """Covariance blocks of all variables that share a clique, computed once."""
+        # Imported here: this module of the trust room also knows how to eliminate a graph, and
+        # loading that takes longer than most questions.
+        from jointmap.trust.marginals import selected_inverse_of
+
+        return selected_inverse_of(self.factor.tree)
 
     # Stamps ------------------------------------------------------------------------------------
 
@@ -323,12 +334,18 @@ class JointState:
         out = np.full((len(pairs), self.group.dof, self.group.dof), np.nan)
         joined = self.part[first] == self.part[second]
         if joined.any():
-            # The column of the commoner side is kept while the other runs.
-            flip = len(np.unique(second[joined])) < len(np.unique(first[joined]))
-            p, q = (second, first) if flip else (first, second)
-            made = self.factor.pairs(p[joined], q[joined])
-            made = np.swapaxes(made, 1, 2) if flip else made
-            out[joined] = self._datum(first[joined], second[joined], made)
+            one, two = first[joined], second[joined]
+            made = np.empty((len(one), self.group.dof, self.group.dof))
+            near = self.inverse.shares_clique(one, two)
+            if near.any():
+                made[near] = self.inverse.pairs(one[near], two[near])
+            if not near.all():
+                # The column of the commoner side is kept while the other runs.
+                p, q = one[~near], two[~near]
+                flip = len(np.unique(q)) < len(np.unique(p))
+                far = self.factor.pairs(q, p) if flip else self.factor.pairs(p, q)
+                made[~near] = np.swapaxes(far, 1, 2) if flip else far
+            out[joined] = self._datum(one, two, made)
         return np.asarray(out[back])
 
     def _blocks(self, keys: Ints, landmarks: Ints, robot: Ints) -> Floats:
