@@ -108,9 +108,9 @@ def _rejections(associations: pd.DataFrame, measurements: pd.DataFrame) -> list[
         if share > REJECTED_MEASUREMENTS and len(group) >= 20:
             out.append(("weak", f"{share:.0%} of the {kind}s of {name} were rejected"))
     control = measurements.loc[measurements["kind"] == "control", "verdict"]
-    tested, against = int((control != "unusable").sum()), int((control == "rejected").sum())
-    if against > REJECTED_CONTROL * tested:
-        out.append(("weak", f"{against} of {tested} control points contradict the others"))
+    total, against = int((control != "unusable").sum()), int((control == "rejected").sum())
+    if against > REJECTED_CONTROL * total:
+        out.append(("weak", f"{against} of {total} control points contradict the others"))
     return out
 
 
