@@ -41,6 +41,8 @@ _DISK_ERRORS = {
     errno.EDQUOT,
     errno.ENAMETOOLONG,
 }
+#: Signals that asked this run to end; a callback of a compiled library may lose the exception.
+_interrupts: list[int] = []
 _FORMATS = "CSV, .csv.gz or Parquet, by its name"
 
 
@@ -52,8 +54,12 @@ def main(arguments: Sequence[str] | None = None) -> int:
     int
         Exit code; argparse itself raises SystemExit(2) on wrong usage and (0) after ``--help``.
     """
+    _interrupts.clear()
     if threading.current_thread() is threading.main_thread():
         signal.signal(signal.SIGTERM, _interrupt)
+        # A shell that starts this in the background wants Ctrl-C ignored.
+        if signal.getsignal(signal.SIGINT) is signal.default_int_handler:
+            signal.signal(signal.SIGINT, _interrupt)
     given = list(sys.argv[1:] if arguments is None else arguments)
     args = _parser(given).parse_args(given)
     run: Callable[[argparse.Namespace], int] = args.run
@@ -63,8 +69,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         terminal.refuse(error, as_json=getattr(args, "json", False))
         return REFUSED
     except KeyboardInterrupt:
-        print("interrupted: no result was written", file=sys.stderr)
-        return INTERRUPTED
+        return _interrupted()
     except OSError as error:
         if error.errno not in _DISK_ERRORS:
             terminal.fault(error)
@@ -72,13 +77,22 @@ def main(arguments: Sequence[str] | None = None) -> int:
         print(f"jointmap: {error.filename or 'disk'}: {error.strerror}", file=sys.stderr)
         return REFUSED
     except Exception as error:
+        # A library that is just being loaded turns the interrupt into an error of its own.
+        if _interrupts:
+            return _interrupted()
         terminal.fault(error)
         return FAULT
 
 
 def _interrupt(signum: int, frame: FrameType | None) -> NoReturn:
-    # The same way out as Ctrl-C: every `finally` on it runs.
+    # The same way out for every signal: each `finally` on it runs.
+    _interrupts.append(signum)
     raise KeyboardInterrupt
+
+
+def _interrupted() -> int:
+    print("interrupted: no result was written", file=sys.stderr)
+    return INTERRUPTED
 
 
 def _parser(given: Sequence[str]) -> argparse.ArgumentParser:
@@ -202,6 +216,8 @@ def _fuse(args: argparse.Namespace) -> int:
         progress.stage("read")
         survey = read_survey(args.survey)
         reference = fuse(survey, settings, progress)
+        if _interrupts:
+            raise KeyboardInterrupt
         write_reference(reference, args.out, replace=args.replace)
     finally:
         progress.finish()

@@ -91,7 +91,8 @@ def test_an_end_at_a_random_moment(
         time.sleep(rng.uniform(0.0, 0.02 if moment == "writing" else 0.15))
     running.send_signal(signum)
     _, err = running.communicate(timeout=60)
-    assert running.returncode in (0, 3, 130, -signum)
+    # Python itself ends by the signal where it strikes code that is just being made.
+    assert running.returncode in (0, 3, 130, -signum), err
     if moment != "any":
         assert "Traceback" not in err
     if out.exists():
