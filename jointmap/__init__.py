@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from jointmap.fuse import fuse
     from jointmap.ingest import read_survey
     from jointmap.products.files import read_reference, write_reference
+    from jointmap.products.picture import draw_map
     from jointmap.products.reference import Reference
     from jointmap.settings import Settings
     from jointmap.simulate import simulate
@@ -32,6 +33,7 @@ __all__ = [
     "Reference",
     "Settings",
     "__version__",
+    "draw_map",
     "fuse",
     "read_reference",
     "read_survey",
@@ -43,6 +45,7 @@ __all__ = [
 _HOMES = {
     "Reference": "jointmap.products.reference",
     "Settings": "jointmap.settings",
+    "draw_map": "jointmap.products.picture",
     "fuse": "jointmap.fuse",
     "read_reference": "jointmap.products.files",
     "read_survey": "jointmap.ingest",

@@ -76,3 +76,7 @@ class GaugeError(JointMapError, ValueError):
 
 class IndeterminateError(JointMapError, ValueError):
     """The measurements leave a variable undetermined; names robot, time or landmark."""
+
+
+class MissingPackageError(JointMapError, ImportError):
+    """An optional package that this needs is not installed; says how to install it."""
