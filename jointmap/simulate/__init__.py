@@ -1,4 +1,4 @@
-"""Worlds with known truth: survey folders exactly as TABLES.md says, and the truth beside them."""
+"""Worlds with known truth: survey folders exactly as the schema says, and the truth beside them."""
 
 from jointmap.simulate.build import WORLDS, Simulation, build
 from jointmap.simulate.run import SimulationReport, simulate

@@ -60,7 +60,7 @@ def simulate(
     world : {"quarry-2d", "quarry-3d"}
         Galleries of a disused slate quarry, on one floor or on benches joined by ramps.
     out : path
-        Folder to write; TABLES.md says what it holds. The truth goes to ``truth/``.
+        Folder to write; :mod:`jointmap.schema` says what it holds. The truth goes to ``truth/``.
     settings : SimulationSettings, optional
         Team, world, sensors and errors.
     seed : int

@@ -1,4 +1,4 @@
-"""A simulated survey as a folder: what TABLES.md says, and the truth beside it."""
+"""A simulated survey as a folder: tables as the schema has them, and the truth beside it."""
 
 from __future__ import annotations
 

@@ -1,7 +1,7 @@
 """Which associations hold: a decision for each robot's label as a whole.
 
 Every track has a landmark of its own; an accepted association ties it to the shared landmark by a
-tight factor. The redundancy of that factor gives the exact statistic of leaving it out (CHECKS 2d:
+tight factor. The redundancy of that factor gives the exact statistic of leaving it out (Baarda 1968:
 the deleted residual is v / r), so the decision needs no solve per association. A rejected track
 stays where its own sightings put it; how far that is from the landmark it claims, and from every
 other landmark, decides whether it returns and what it agrees with instead.

@@ -3,7 +3,7 @@
 A component without absolute data may move as a whole: 3 degrees of freedom in the plane, 6 in
 space, 4 when gravity holds roll and pitch. Fixes and control points may hold some or all of them.
 What is left free is held at the component's first keyframe by rows with residual zero: a minimal
-datum, which changes no residual and no relative quantity (CHECKS C4: the covariance is moved to
+datum, which changes no residual and no relative quantity (the covariance is moved to
 the datum asked for afterwards).
 """
 

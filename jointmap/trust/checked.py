@@ -5,7 +5,7 @@ and is called ``unchecked``. Between two such observations the trajectory is hel
 it is ``weak`` where odometry alone carries it so far that its drift exceeds twice the sigma that
 the robot's observed poses usually have, or where for a while everything rests on one single
 landmark, whose error or wrong label nothing would reveal. An observation or a landmark counts as
-checked by its redundancy: below 0.1 it is weak, below 0.01 unchecked (CHECKS 2d).
+checked by its redundancy: below 0.1 it is weak, below 0.01 unchecked.
 """
 
 from __future__ import annotations

@@ -14,7 +14,7 @@ from jointmap.ingest.survey import AssociationEdit
 from jointmap.settings import Settings
 from jointmap.simulate import SimulationSettings, simulate
 
-#: Non-centrality of Baarda's test for two components, alpha 0.001, power 0.8 (CHECKS B2).
+#: Non-centrality of Baarda's test for two components, alpha 0.001, power 0.8 (Baarda 1968).
 LAMBDA = 19.66
 
 

@@ -52,7 +52,7 @@ def survey(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFact
 
 
 def survey_time(stamps: pd.Series, robot: str, folder: Path) -> np.ndarray:
-    """Survey time by the convention of TABLES.md, from what truth/settings.json states."""
+    """Survey time by the convention of survey.toml, from what truth/settings.json states."""
     clock = json.loads((folder / "truth/settings.json").read_text())["robots"][robot]["clock"]
     first = table(folder, f"{robot}/odometry.csv")["t_s"].iloc[0]
     drift = clock["drift_ppm"] * 1e-6
