@@ -153,7 +153,9 @@ def _refuse(target: Path, replace: bool, marker: str) -> None:
 
 
 def _exists(target: Path, what: str, replace: bool) -> OutputExistsError:
-    mend = "choose another name" if replace else "choose another name or ask to replace it (--replace)"
+    mend = (
+        "choose another name" if replace else "choose another name or ask to replace it (--replace)"
+    )
     return OutputExistsError(f"{target} {what}; {mend}")
 
 

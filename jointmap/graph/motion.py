@@ -85,9 +85,16 @@ def odometry_blocks(
         motion.odometry, motion.t_rows, stamps, survey.dimension, max_gap_s=max_gap_s, **scale
     )
     cut = np.zeros(hi - lo, dtype=bool)
+    notes = _gap_notes(motion, stamps, made.gap_s, made.gap)
     for split in motion.splits:
         i = int(np.searchsorted(stamps, split, side="left"))
-        cut[min(max(i, 1), hi - lo - 1)] = True
+        if 0 < i < hi - lo:
+            cut[i] = True
+        else:
+            notes.append(
+                f"{motion.robot}: the edit that splits its odometry at {split:.3f} s lies outside "
+                "the odometry and does nothing"
+            )
     keep = np.flatnonzero(~cut[1:])
     covariance = np.array(made.row_cov)
     gap: Bools = np.asarray(made.gap & np.isfinite(made.gap_cov).all(axis=(1, 2)))
@@ -118,9 +125,7 @@ def odometry_blocks(
         source=Provenance(source.files, source.file[rows[keep]], source.row[rows[keep]]),
         burst=np.arange(n),
     )
-    return OdometryMade(
-        [block] if n else [], poses, cut, _gap_notes(motion, stamps, made.gap_s, made.gap)
-    )
+    return OdometryMade([block] if n else [], poses, cut, notes)
 
 
 def _gap_notes(motion: Motion, stamps: Floats, gap_s: Floats, gap: Bools) -> list[str]:

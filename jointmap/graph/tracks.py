@@ -85,9 +85,13 @@ class TrackTable:
             for track in self._tracks:
                 if (robots[track.robot], track.label) != (edit.robot, edit.label):
                     continue
-                track.rejected = edit.action == "reject"
                 if edit.action == "force":
                     track.forced, track.claim = True, edit.landmark or track.claim
+                elif edit.landmark is None or edit.landmark == track.claim:
+                    track.rejected = True
+        for track in self._tracks:
+            # What a label is forced to be says what the rejection of its claim leaves open.
+            track.rejected &= not track.forced
         names = dict.fromkeys(t.claim for t in self._tracks if t.claim is not None)
         control = self._survey.control_points
         if control is not None:

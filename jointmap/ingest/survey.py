@@ -91,8 +91,8 @@ class Odometry:
     ``pose`` (N, 3 or 7) in pose form, ``twist`` (N, 3: vx vy wz, or 6: vx vy vz wx wy wz) in
     twist form, the other is ``None``. ``sigma`` (N, dof) of the increment from the row before
     (pose form) or of the twist components (twist form, table order of the twist), NaN where not
-    given. ``acc_cov`` (N, dof, dof) accumulated covariance, body frame of the row, NaN where not
-    given.
+    given. ``acc_cov`` (N, dof, dof) accumulated covariance in table order, rotation about the fixed
+    axes of the odometry frame (as every covariance of a pose row), NaN where not given.
     """
 
     form: Literal["pose", "twist"]

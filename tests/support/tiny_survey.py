@@ -151,7 +151,7 @@ class World:
         mounting: Floats | None = None,
         until_s: float = np.inf,
     ) -> pd.DataFrame:
-        """Every plate within reach, in all directions, each ``every_s``."""
+        """Every plate beyond half a metre and within reach, all around, each ``every_s``."""
         rows = []
         mounting = np.eye(self.dimension + 1) if mounting is None else mounting
         for t in np.arange(self.t_s[0] + 0.5 * every_s, min(self.t_s[-1], until_s), every_s):
@@ -159,7 +159,7 @@ class World:
             for name, place in self.landmarks.items():
                 if plates is not None and name not in plates:
                     continue
-                if np.linalg.norm(place - sensor[:-1, -1]) < reach_m:
+                if 0.5 < np.linalg.norm(place - sensor[:-1, -1]) < reach_m:
                     seen = self.polar(place, sensor, parts)
                     rows.append({"t_s": t, "sensor": "front", "landmark": name, **seen})
         return pd.DataFrame(rows)
