@@ -16,7 +16,7 @@ from jointmap.graph import blocks as make
 from jointmap.graph.clock import SurveyClock, fixed_values
 from jointmap.graph.keyframes import choose_instants, join
 from jointmap.graph.motion import Motion, odometry_blocks, prepare_motion
-from jointmap.graph.problem import Block, Keyframes, Kind, Problem, Unusable
+from jointmap.graph.problem import Block, Keyframes, Kind, Problem, Tracks, Unusable
 from jointmap.graph.tracks import TrackTable
 from jointmap.ingest.survey import Observations, Survey
 
@@ -100,6 +100,7 @@ def build_problem(
         all_blocks += made_rows.blocks
         unusable += made_rows.unusable
     frozen = tracks.freeze()
+    notes += _idle_edits(survey, frozen)
     if survey.control_points is not None and len(survey.control_points.landmarks):
         all_blocks.append(make.control_block(survey.control_points, frozen, survey.dimension))
     return Problem(
@@ -114,6 +115,17 @@ def build_problem(
         unusable=tuple(unusable),
         notes=tuple(notes),
     )
+
+
+def _idle_edits(survey: Survey, tracks: Tracks) -> list[str]:
+    """Edits of associations that no sighting belongs to."""
+    names = list(survey.robots)
+    used = {(names[r], label) for r, label in zip(tracks.robot, tracks.labels, strict=True)}
+    return [
+        f"edits.toml: {e.robot} has no usable sighting of {e.label!r}; the edit does nothing"
+        for e in survey.edits.associations
+        if (e.robot, e.label) not in used
+    ]
 
 
 @dataclass(frozen=True)

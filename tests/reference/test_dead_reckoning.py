@@ -76,6 +76,12 @@ def test_heading_walk_per_metre_does_not_depend_on_the_row_rate(per_row_m, dimen
     assert covariance[y, yaw] == pytest.approx(0.5, rel=1e-10)
     # 5.77350 m after 100 m: the printed lateral standard deviation
     assert np.sqrt(covariance[y, y]) == pytest.approx(5.77350, abs=5e-6)
+    # and 0.18257 m after 10 m
+    early = increments(
+        _odometry("twist", t, rows), t, np.array([0.0, length / 10]), dimension, max_gap_s=1e9
+    )
+    short = early.basis[0, 1] * HEADING_SIGMA**2
+    assert np.sqrt(short[y, y]) == pytest.approx(0.18257, abs=5e-6)
 
 
 def test_slopes_of_error_growth():

@@ -112,6 +112,12 @@ def test_printed_values(name: str, c: float, weight: tuple, loss: tuple) -> None
     np.testing.assert_allclose(Kernel(name, c).loss(x, 1), loss, atol=5.1e-7)
 
 
+def test_printed_weights_of_dynamic_covariance_scaling() -> None:
+    """Printed by gtsam 4.3.0 for Phi = 1 at |x| = 0.5, 1, 3, 10."""
+    weight = Kernel("dcs", 1.0).weight(np.array([0.5, 1.0, 3.0, 10.0]), 1)
+    np.testing.assert_allclose(weight, [1.0, 1.0, 0.04, 0.000392], rtol=0, atol=5e-7)
+
+
 @pytest.mark.parametrize("name", NAMES)
 @pytest.mark.parametrize("d", [1, 2, 6])
 def test_equals_gtsam(name: str, d: int) -> None:

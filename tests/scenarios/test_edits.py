@@ -72,6 +72,14 @@ def test_reject(world: World, tmp_path: Path) -> None:
     assert label not in set(reference.suspects.query("kind == 'association'")["target"])
 
 
+def test_an_edit_of_a_label_that_was_never_seen_is_said(world: World, tmp_path: Path) -> None:
+    edit = '[[reject_association]]\nrobot = "otter"\nlabel = "mark-777"\n'
+    reference = fused(survey(world, tmp_path / "survey", edit))
+    assert any(
+        "otter has no usable sighting of 'mark-777'" in text for text in reference.meta["distrust"]
+    )
+
+
 def test_force_where_the_table_is_wrong(world: World, tmp_path: Path) -> None:
     right = busiest(world, world.sightings("otter"))
     label = f"mark-{right[-3:]}"

@@ -11,12 +11,13 @@ import numpy as np
 import pandas as pd
 import pytest
 from association_study import judged
+from tiny_survey import World, full_survey
 
 import jointmap
 from jointmap.cli import main
 from jointmap.products.files import read_reference
 from jointmap.progress import Silent
-from jointmap.settings import Settings
+from jointmap.settings import KERNELS, Settings
 from jointmap.simulate import SimulationSettings, simulate
 from jointmap.solve.system import whitened_norm, whitened_residual
 
@@ -91,3 +92,25 @@ def test_the_command_with_this_kernel(survey: Path, tmp_path: Path) -> None:
     assert outcome.right_rejected == 0
     # The same survey under the default kernel ends at 0.06 to 0.08 m.
     assert outcome.rmse < 0.15
+
+
+@pytest.mark.parametrize("kernel", [k for k in KERNELS if k != "cauchy"])
+def test_every_kernel_leads_to_the_same_inlier_solution(kernel: str, clean: tuple) -> None:
+    """The last solve has no kernel, so without outliers the choice must not matter."""
+    logs, expected = clean
+    settings = Settings(kernel=kernel, noise="given", calibrate=False)  # type: ignore[arg-type]
+    reference = jointmap.fuse(logs, settings)
+    assert reference.status == expected.status == "ok"
+    for name, path in reference.trajectories.items():
+        same = expected.trajectories[name]
+        sigma = np.sqrt(np.einsum("nii->ni", same.cov))
+        gap = path.pose[:, :2] - same.pose[:, :2]
+        # Rows on the edge of the gate may fall either way.
+        assert np.abs(gap / sigma[:, :2]).max() < 0.5
+
+
+@pytest.fixture(scope="module")
+def clean(tmp_path_factory: pytest.TempPathFactory) -> tuple:
+    folder = full_survey(World(2, duration_s=30.0), tmp_path_factory.mktemp("clean") / "survey")
+    logs = jointmap.read_survey(folder)
+    return logs, jointmap.fuse(logs, Settings(noise="given", calibrate=False))
