@@ -36,7 +36,7 @@ class Posterior:
     located : Located
         The stamps.
     errors : (S, m, dof) float
-        Body tangents: a drawn truth is ``T exp(error)``.
+        Body tangents of the reference: a drawn truth is ``T exp(-error)``.
     landmarks : (S, L, d) float
         Errors of ``landmark_names``, map axes.
     """
