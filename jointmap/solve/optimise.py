@@ -1,7 +1,8 @@
 """Robust Gauss-Newton with Levenberg-Marquardt damping where a step fails.
 
 Iteratively reweighted least squares (Holland & Welsch 1977): at each state the kernel's weights
-enter the linear system; GTSAM eliminates it. A step that raises the robust objective is repeated
+enter the linear system; GTSAM eliminates it. What a step moves as a whole is applied exactly
+(:mod:`jointmap.solve.rigid`). A step that raises the robust objective is repeated
 with Marquardt's diagonal damping (Marquardt 1963).
 """
 
@@ -16,7 +17,8 @@ from numpy.typing import NDArray
 
 from jointmap.graph.problem import State
 from jointmap.solve.linear import LinearGraph, eliminate, step, system_order
-from jointmap.solve.system import System, cost, linearise_system, retract
+from jointmap.solve.rigid import common_motion, move, without
+from jointmap.solve.system import LinearisedSystem, System, cost, linearise_system, retract
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -74,9 +76,7 @@ def optimise(
         first = now if iteration == 1 else first
         if ordering is None:
             ordering = system_order(system, lin.graph)
-        moved, new, damping, size = _descend(
-            system, state, lin.graph, now, ordering, damping, settings
-        )
+        moved, new, damping, size = _descend(system, state, lin, ordering, damping, settings)
         if report is not None:
             report(f"iteration {iteration}: objective {min(new, now):.6g}")
         if moved is None:
@@ -96,13 +96,13 @@ def optimise(
 def _descend(
     system: System,
     state: State,
-    graph: LinearGraph,
-    now: float,
+    lin: LinearisedSystem,
     ordering: gtsam.Ordering,
     damping: float,
     settings: OptimiseSettings,
 ) -> tuple[State | None, float, float, float]:
     """One accepted step: new state, its objective, the damping to go on with, largest move."""
+    graph, now = lin.graph, lin.cost
     diagonal: Floats | None = None
     size = np.inf
     while True:
@@ -121,8 +121,10 @@ def _descend(
                 raise
             ok = False
         if ok:
+            motion = common_motion(system, lin.gauge, state, delta)
+            delta = without(system, state, delta, motion)
             size = float(np.abs(delta).max(initial=0.0))
-            moved = retract(system, state, delta)
+            moved = move(system, retract(system, state, delta), motion)
             new = cost(system, moved)
             if new <= now * (1 + 1e-12) + 1e-12:
                 smaller = damping * 0.1
