@@ -186,15 +186,36 @@ def _fill_fuse(parser: argparse.ArgumentParser) -> None:
         "--out", type=Path, required=True, metavar="REFERENCE", help="folder to write"
     )
     _add_replace(parser)
-    parser.add_argument("--datum", choices=DATUMS, help="default: as survey.toml says")
-    parser.add_argument("--robot", metavar="NAME", help="robot that the datum starts at")
     parser.add_argument(
-        "--kernel", choices=KERNELS, default=default.kernel, help=f"default: {default.kernel}"
+        "--datum",
+        choices=DATUMS,
+        help="what coordinates and covariances refer to (default: as survey.toml says)",
     )
     parser.add_argument(
-        "--noise", choices=NOISE_MODES, default=default.noise, help=f"default: {default.noise}"
+        "--robot",
+        metavar="NAME",
+        help="robot whose first pose the coordinates start at (default: as survey.toml says)",
     )
-    parser.add_argument("--seed", type=int, default=default.seed, metavar="N", help="default: 0")
+    parser.add_argument(
+        "--kernel",
+        choices=KERNELS,
+        default=default.kernel,
+        help=f"robust kernel of the first solves (default: {default.kernel})",
+    )
+    parser.add_argument(
+        "--noise",
+        choices=NOISE_MODES,
+        default=default.noise,
+        help="given: sigmas as the survey states them, defaults elsewhere; estimated: from the "
+        f"data where they can tell (default: {default.noise})",
+    )
+    parser.add_argument(
+        "--seed",
+        type=int,
+        default=default.seed,
+        metavar="N",
+        help=f"seed of everything random (default: {default.seed})",
+    )
     parser.add_argument("--json", action="store_true", help="print reference.json, not the page")
     parser.add_argument("--quiet", action="store_true", help="print only what needs attention")
     parser.set_defaults(run=_fuse)

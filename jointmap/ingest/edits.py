@@ -27,8 +27,8 @@
     name = "range_m"
     value = 0.1
 
-    [[fix_calibration]]         # hold a calibration value
-    robot = "heron"
+    [[fix_calibration]]         # hold odometry_scale, odometry_turn_scale or odometry_lag_s of a
+    robot = "heron"             # robot, or with `sensor` the lag_s of that sensor
     name = "odometry_scale"
     value = 1.0
 
@@ -60,6 +60,8 @@ from jointmap.ingest.survey import (
 FILE = "edits.toml"
 Edit = AssociationEdit | MaskEdit | SplitEdit | FixedValueEdit
 _CLOCK = ("offset_s", "drift_ppm")
+_ODOMETRY_CALIBRATION = ("odometry_scale", "odometry_turn_scale", "odometry_lag_s")
+_SENSOR_CALIBRATION = ("lag_s",)
 
 
 def format_edit(edit: Edit) -> str:
@@ -218,10 +220,14 @@ def _fixed(
     robot = _robot(section, sensors)
     sensor = None if what == "clock" else _sensor(section, robot, sensors)
     name = _needed(section, "name")
-    if name is not None and what != "calibration":
-        known = _CLOCK if what == "clock" else SENSOR_NOISE if sensor else ODOMETRY_NOISE
-        if name not in known:
-            section.wrong("name", f"{name!r} cannot be fixed here", did_you_mean(name, known))
+    of_sensor, of_robot = {
+        "sigma": (SENSOR_NOISE, ODOMETRY_NOISE),
+        "calibration": (_SENSOR_CALIBRATION, _ODOMETRY_CALIBRATION),
+        "clock": (_CLOCK, _CLOCK),
+    }[what]
+    known = of_sensor if sensor else of_robot
+    if name is not None and name not in known:
+        section.wrong("name", f"{name!r} cannot be fixed here", did_you_mean(name, known))
     value = _needed_number(section, "value", above=0.0 if what == "sigma" else -math.inf)
     if robot is None or name is None or value is None:
         return None

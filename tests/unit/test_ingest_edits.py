@@ -62,7 +62,11 @@ edit_strategy = st.one_of(
     ),
     st.builds(MaskEdit, names, sensors, st.just(-math.inf), st.just(math.inf)),
     st.builds(SplitEdit, names, numbers),
-    st.builds(FixedValueEdit, st.just("calibration"), names, sensors, names, numbers),
+    st.builds(
+        FixedValueEdit, st.just("calibration"), names, st.none(),
+        st.sampled_from(["odometry_scale", "odometry_turn_scale", "odometry_lag_s"]), numbers,
+    ),
+    st.builds(FixedValueEdit, st.just("calibration"), names, names, st.just("lag_s"), numbers),
     st.builds(
         FixedValueEdit, st.just("sigma"), names, names, st.sampled_from(SENSOR_NOISE),
         st.floats(min_value=1e-300, allow_infinity=False),
@@ -130,6 +134,16 @@ def test_what_is_written_reads_back(edits: list[Edit]) -> None:
             '[[fix_sigma]]\nrobot = "heron"\nsensor = "front"\nname = "range_m"\nvalue = 0\n',
             "fix_sigma[1].value",
             "it must be larger than 0",
+        ),
+        (
+            '[[fix_calibration]]\nrobot = "heron"\nname = "odometry_scal"\nvalue = 1\n',
+            "fix_calibration[1].name",
+            "did you mean 'odometry_scale'?",
+        ),
+        (
+            '[[fix_calibration]]\nrobot = "heron"\nsensor = "front"\nname = "lag"\nvalue = 1\n',
+            "fix_calibration[1].name",
+            "did you mean 'lag_s'?",
         ),
         (
             '[[force_association]]\nrobot = "heron"\nlabel = "plate-017"\n',
