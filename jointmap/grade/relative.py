@@ -28,6 +28,8 @@ TIMES_S = (1.0, 2.0, 5.0, 10.0, 30.0, 60.0, 120.0, 300.0, 600.0, 1800.0)
 FEWEST = 6
 #: Segments per robot and length at most; they overlap anyway.
 MOST = 300
+#: Lengths and times that are printed at most, evenly from the short to the long ones.
+MOST_SIZES = 5
 
 
 @dataclass(frozen=True)
@@ -138,7 +140,8 @@ def _segments(
         )
         if len(made.start):
             out.append(made)
-    return out
+    kept = np.unique(np.linspace(0, len(out) - 1, min(MOST_SIZES, len(out))).astype(int))
+    return [out[k] for k in kept]
 
 
 def between_robots(stage: Stage, matched: Matched, most: int = 300) -> Segments:
