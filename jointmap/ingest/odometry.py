@@ -8,7 +8,6 @@ from typing import Literal
 import numpy as np
 
 from jointmap import schema
-from jointmap.frames import quaternion_to_matrix
 from jointmap.ingest.covariance import read_covariance
 from jointmap.ingest.degrees import check_heading, check_turn_rates
 from jointmap.ingest.problems import Problems
@@ -75,8 +74,6 @@ def _pose_form(table: Table, dimension: int, problems: Problems) -> Odometry:
     sigmas = schema.sigma_columns(dimension)
     check_sigmas(table, sigmas, problems)
     acc = read_covariance(table, dimension, problems, accumulated=True)
-    if acc is not None:
-        acc = to_body_axes(acc, pose, dimension)
     return Odometry(
         form="pose",
         t_s=table.number("t_s"),
@@ -149,21 +146,3 @@ def _last_of_stamp(table: Table, problems: Problems) -> Table:
     keep = np.ones(table.n, dtype=bool)
     keep[:-1] = ~doubled[1:]
     return table.take(keep)
-
-
-def to_body_axes(cov: Floats, pose: Floats, dimension: int) -> Floats:
-    """Covariances (n, dof, dof) from the axes of the odometry frame to those of the row's body.
-
-    Both blocks, position and rotation, turn with the body: ``C_body = A' C A`` with
-    ``A = blockdiag(R, R)`` (two dimensions: ``blockdiag(R, 1)``).
-    """
-    n, dof = len(pose), cov.shape[1]
-    turn = np.zeros((n, dof, dof))
-    if dimension == 2:
-        cos, sin = np.cos(pose[:, 2]), np.sin(pose[:, 2])
-        turn[:, 0, 0], turn[:, 0, 1] = cos, -sin
-        turn[:, 1, 0], turn[:, 1, 1] = sin, cos
-        turn[:, 2, 2] = 1.0
-    else:
-        turn[:, :3, :3] = turn[:, 3:, 3:] = quaternion_to_matrix(pose[:, 3:])
-    return np.asarray(np.swapaxes(turn, 1, 2) @ cov @ turn)

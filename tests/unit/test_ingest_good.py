@@ -13,6 +13,7 @@ import pyarrow.parquet as pq
 import pytest
 from survey_folder import FILES, HERON, TOML, good, good_3d, write
 
+from jointmap.graph.build import build_problem
 from jointmap.ingest.read import read_survey
 from jointmap.ingest.survey import SIGMA_COLUMNS, VALUE_COLUMNS, Survey
 
@@ -226,20 +227,25 @@ def test_unwrapped_yaw_is_no_degrees(tmp_path: Path) -> None:
     assert survey.robots["heron"].odometry.pose is not None
 
 
-def test_accumulated_covariance_is_turned_into_the_body(tmp_path: Path) -> None:
-    # A robot heading along y: what the odometry frame calls y is the robot's x.
+def test_accumulated_covariance_keeps_the_axes_of_the_odometry_frame(tmp_path: Path) -> None:
+    # A robot heading along y: its increment is worst sideways, which the odometry frame calls x.
     text = (
         "t_s,x_m,y_m,yaw_rad,acc_cov_x_x,acc_cov_x_y,acc_cov_x_yaw,"
         "acc_cov_y_y,acc_cov_y_yaw,acc_cov_yaw_yaw\n"
         f"0.0,0,0,{np.pi / 2},0.0,0.0,0.0,0.0,0.0,0.0\n"
-        f"1.0,0,1,{np.pi / 2},0.01,0.0,0.001,0.04,0.0,0.0004\n"
+        f"1.0,0,1,{np.pi / 2},0.04,0.0,0.001,0.01,0.0,0.0004\n"
     )
-    acc = read_survey(good(tmp_path, heron__odometry_csv=text)).robots["heron"].odometry.acc_cov
+    survey = read_survey(good(tmp_path, heron__odometry_csv=text))
+    acc = survey.robots["heron"].odometry.acc_cov
     assert acc is not None
-    # Along the body's x (odometry y) 0.04; odometry x is the body's -y: the cross term flips.
-    expected = [[0.04, 0.0, 0.0], [0.0, 0.01, -0.001], [0.0, -0.001, 0.0004]]
-    np.testing.assert_allclose(acc[1], expected, atol=1e-15)
+    table = [[0.04, 0.0, 0.001], [0.0, 0.01, 0.0], [0.001, 0.0, 0.0004]]
+    np.testing.assert_allclose(acc[1], table, atol=1e-15)
     np.testing.assert_array_equal(acc[0], np.zeros((3, 3)))
+    # What the graph makes of it: along the body's x 0.01, odometry x is the body's -y.
+    block = next(b for b in build_problem(survey).blocks if b.kind == "odometry" and b.robot == 0)
+    assert block.covariance is not None
+    body = [[0.01, 0.0, 0.0], [0.0, 0.04, -0.001], [0.0, -0.001, 0.0004]]
+    np.testing.assert_allclose(block.covariance[0], body, atol=1e-15)
 
 
 def test_closures(tmp_path: Path) -> None:
