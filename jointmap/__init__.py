@@ -20,6 +20,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from jointmap.fuse import fuse
+    from jointmap.grade import grade
     from jointmap.ingest import read_survey
     from jointmap.products.files import read_reference, write_reference
     from jointmap.products.picture import draw_map
@@ -35,6 +36,7 @@ __all__ = [
     "__version__",
     "draw_map",
     "fuse",
+    "grade",
     "read_reference",
     "read_survey",
     "simulate",
@@ -47,6 +49,7 @@ _HOMES = {
     "Settings": "jointmap.settings",
     "draw_map": "jointmap.products.picture",
     "fuse": "jointmap.fuse",
+    "grade": "jointmap.grade",
     "read_reference": "jointmap.products.files",
     "read_survey": "jointmap.ingest",
     "simulate": "jointmap.simulate",

@@ -16,7 +16,7 @@ from types import FrameType
 from typing import TYPE_CHECKING, NoReturn
 
 from jointmap import __version__, terminal
-from jointmap.errors import JointMapError
+from jointmap.errors import JointMapError, SettingsError
 from jointmap.settings import DATUMS, KERNELS, NOISE_MODES, Settings
 
 if TYPE_CHECKING:
@@ -122,6 +122,11 @@ def _fill_simulate(parser: argparse.ArgumentParser) -> None:
 
     parser.add_argument("world", choices=("quarry-2d", "quarry-3d"), help="which world")
     parser.add_argument("--out", type=Path, required=True, metavar="SURVEY", help="folder to write")
+    parser.add_argument(
+        "--online",
+        action="store_true",
+        help="run the textbook online estimators over it too (planar worlds)",
+    )
     parser.add_argument("--seed", type=int, default=0, metavar="N", help="seed (default: 0)")
     _add_replace(parser)
     add_arguments(parser)
@@ -135,8 +140,27 @@ def _simulate(args: argparse.Namespace) -> int:
 
     terminal.tell(recover(args.out))
     settings = settings_from(args)
+    if args.online and args.world != "quarry-2d":
+        raise SettingsError("--online: the textbook estimators are planar; choose quarry-2d")
     report = simulate(args.world, args.out, settings, seed=args.seed, replace=args.replace)
     terminal.say("\n".join(report.lines()))
+    if args.online:
+        from jointmap.commands_grade import estimate_into
+
+        estimate_into(args.out, replace=False)
+    return OK
+
+
+def _fill_estimate(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("survey", type=Path, metavar="SURVEY", help="survey folder, planar")
+    _add_replace(parser)
+    parser.set_defaults(run=_estimate)
+
+
+def _estimate(args: argparse.Namespace) -> int:
+    from jointmap.commands_grade import estimate_into
+
+    estimate_into(args.survey, replace=args.replace)
     return OK
 
 
@@ -267,6 +291,12 @@ def _show(reference: Reference, args: argparse.Namespace) -> None:
         terminal.say(status_line(reference))
 
 
+def _fill_grade(parser: argparse.ArgumentParser) -> None:
+    from jointmap import commands_grade
+
+    commands_grade.fill(parser)
+
+
 def _fill_poses(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("reference", type=Path, metavar="REFERENCE", help="reference folder")
     parser.add_argument(
@@ -296,8 +326,10 @@ def _poses(args: argparse.Namespace) -> int:
 
 _COMMANDS: dict[str, tuple[Callable[[argparse.ArgumentParser], None], str]] = {
     "simulate": (_fill_simulate, "write a survey of a made-up quarry, with its truth"),
+    "estimate": (_fill_estimate, "run textbook online estimators over a planar survey"),
     "import": (_fill_import, "write a survey from logs in another layout"),
     "check": (_fill_check, "read a survey and say what is in it and what is wrong with it"),
     "fuse": (_fill_fuse, "fuse a survey into a reference"),
     "poses": (_fill_poses, "pose and covariance of robots at given stamps"),
+    "grade": (_fill_grade, "grade online estimates against references"),
 }

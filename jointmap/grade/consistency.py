@@ -231,7 +231,7 @@ def judge(
     factor, lower, upper = factor / kept, lower / kept, upper / kept
     freedom = effective * float(dims.mean())
     tail = 0.5 * (1.0 - settings.level)
-    band = chi2.ppf([tail, 1.0 - tail], freedom) / freedom
+    band = np.asarray(chi2.ppf([tail, 1.0 - tail], freedom)) / freedom
     ratio = least_ratio(claim, reference)
     impossible = float(np.nanmean(ratio < low_scale)) if case == "same" else float("nan")
     growth = _growth(series, grid, settings) if shares else (float("nan"),) * 3
@@ -299,7 +299,8 @@ def _coverage(
     if case == "same":
         step = np.linspace(0, len(f) - 1, min(len(f), 100)).astype(int)
         squares = ((d[None] + f[step]) ** 2).sum(axis=2)
-        return tuple(float((squares <= chi2.ppf(p, dims)[None]).mean()) for p in LEVELS)
+        limits = [np.asarray(chi2.ppf(p, dims)) for p in LEVELS]
+        return tuple(float((squares <= limit[None]).mean()) for limit in limits)
     if case == "independent":
         return tuple(float((nees <= chi2.ppf(p, np.maximum(rank, 1))).mean()) for p in LEVELS)
     return (float("nan"),) * len(LEVELS)

@@ -189,7 +189,7 @@ def _robot(
         problems.add(table.files[0], message, "write its estimates, or leave the file", mended=True)
     table = sort_by_time(table, problems)
     rows = table.matrix(names)
-    empty = np.isnan(rows).any(axis=1)
+    empty = np.asarray(np.isnan(rows).any(axis=1))
     if dimension == 3:
         unit, faulty = unit_quaternion(rows[:, 3:])
         empty |= faulty
@@ -224,7 +224,8 @@ def _covariance(
     i, j = np.triu_indices(group.dof)
     cov = np.empty((table.n, group.dof, group.dof))
     cov[:, i, j] = cov[:, j, i] = table.matrix(names)
-    partial = np.isnan(cov).any(axis=(1, 2)) & ~np.isnan(cov).all(axis=(1, 2))
+    unknown = np.isnan(cov)
+    partial = np.asarray(unknown.any(axis=(1, 2)) & ~unknown.all(axis=(1, 2)))
     mend = "the row's covariance is left out"
     table.complain(problems, partial, names[0], "the covariance is incomplete", mend, mended=True)
     cov[partial] = np.nan
@@ -285,7 +286,7 @@ def _maps(files: SurveyFiles, tables: dict[str, str], survey: Survey) -> dict[st
     if table is None or not require(table, ("robot", "landmark", *place), (), files.problems):
         return {}
     position = table.matrix(place)
-    empty = np.isnan(position).any(axis=1)
+    empty = np.asarray(np.isnan(position).any(axis=1))
     table.complain(
         files.problems, empty, place[0], "no position", "the row is left out", mended=True
     )

@@ -187,7 +187,7 @@ def _reference_facts(reference: Reference, stage: Stage) -> dict[str, Any]:
     if meta.get("chi2") is not None and meta.get("dof"):
         dof = int(meta["dof"])
         facts["chi2_per_dof"] = float(meta["chi2"]) / dof
-        facts["chi2_band"] = [float(b) for b in chi2.ppf([0.025, 0.975], dof) / dof]
+        facts["chi2_band"] = [float(chi2.ppf(p, dof)) / dof for p in (0.025, 0.975)]
     return facts
 
 

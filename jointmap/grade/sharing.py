@@ -68,7 +68,8 @@ def sharing_of(stage: Stage, window_s: float) -> Sharing:
     names, landmark = np.unique(
         seen["landmark"].to_numpy(dtype=object)[known].astype(str), return_inverse=True
     )
-    now, earlier = _ties(robot, t_s, landmark, len(names), window_s)
+    number_of = np.asarray(landmark, dtype=np.int64)
+    now, earlier = _ties(robot, t_s, number_of, len(names), window_s)
     met = used[used["kind"] == "encounter"]
     a = met["robot"].map(number).to_numpy(dtype=np.float64)
     b = met["target"].map(number).to_numpy(dtype=np.float64)

@@ -92,15 +92,17 @@ def make_stage(reference: Reference, settings: GradeSettings) -> Stage:
     if not paths_s:
         raise SurveyError("the reference has no trajectory; nothing can be graded against it")
     first, last = min(t[0] for t in paths_s), max(t[-1] for t in paths_s)
-    own = float(np.median([np.median(np.diff(t)) for t in paths_s if len(t) > 1] or [1.0]))
+    steps = [float(np.median(np.diff(t))) for t in paths_s if len(t) > 1]
+    own = float(np.median(steps)) if steps else 1.0
     spacing = max((last - first) / settings.instants, own)
     instants = np.arange(first, last + 0.5 * spacing, spacing)
     robot, instant = [], []
     for r, name in enumerate(joint.robots):
         t_s = reference.trajectories[name].t_s
-        inside = np.flatnonzero((instants >= t_s[0]) & (instants <= t_s[-1])) if len(t_s) else []
+        begin, end = (t_s[0], t_s[-1]) if len(t_s) else (np.inf, -np.inf)
+        inside = np.flatnonzero((instants >= begin) & (instants <= end))
         robot.append(np.full(len(inside), r))
-        instant.append(np.asarray(inside, np.int64))
+        instant.append(inside)
     located = joint.locate(np.concatenate(robot), instants[np.concatenate(instant)])
     known = np.isfinite(located.cov).all(axis=(1, 2))
     located, at = located.take(known), np.concatenate(instant)[known]

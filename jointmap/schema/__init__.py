@@ -15,12 +15,15 @@ from jointmap.schema.columns import (
 from jointmap.schema.inputs import DEFAULT_FILES, INPUT_TABLES, input_table
 from jointmap.schema.markdown import tables_markdown
 from jointmap.schema.outputs import OUTPUT_TABLES, output_table
+from jointmap.schema.scores import SCORE_FILES, SCORE_TABLES
 
 __all__ = [
     "AXES",
     "DEFAULT_FILES",
     "INPUT_TABLES",
     "OUTPUT_TABLES",
+    "SCORE_FILES",
+    "SCORE_TABLES",
     "Column",
     "Dtype",
     "Table",

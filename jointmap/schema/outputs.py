@@ -11,6 +11,7 @@ from jointmap.schema.columns import (
     stamp,
     text,
 )
+from jointmap.schema.scores import SCORE_TABLES
 
 _TRUST = text("trust", "`checked`, `weak` or `unchecked`")
 #: Components that a measurement row can have, by dimension (observed, residual and sigma alike).
@@ -179,6 +180,7 @@ OUTPUT_TABLES: tuple[Table, ...] = (
     _measurements(),
     *_lists(),
     _robots(),
+    *SCORE_TABLES,
 )
 
 
