@@ -6,7 +6,6 @@ from collections.abc import Mapping
 from dataclasses import asdict, dataclass
 from typing import Any
 
-import numpy as np
 import pandas as pd
 
 from jointmap.grade.compare import Comparison, Order
@@ -105,7 +104,15 @@ class Scorecard:
             rows["compare"] += [own | c.row() for c in run.comparisons]
             rows["sharing"] += [own | dict(s) for s in run.sharing]
             rows["order"] += [
-                own | asdict(p) | {"n": run.order.n, "support": run.order.support}
+                own
+                | {
+                    "rank": p.rank,
+                    "estimator": p.estimator,
+                    "value_m": p.value,
+                    "certainty": p.certainty,
+                    "n": run.order.n,
+                    "support": run.order.support,
+                }
                 for p in run.order.places
             ]
         made = {name: pd.DataFrame(found) for name, found in rows.items()}
@@ -163,8 +170,3 @@ def _card_dict(card: EstimatorCard) -> dict[str, Any]:
         "scores": team,
         "consistency": [consistency_row(c) for c in card.consistency],
     }  # fmt: skip
-
-
-def nan_to_none(value: float) -> float | None:
-    """A number for JSON."""
-    return float(value) if np.isfinite(value) else None

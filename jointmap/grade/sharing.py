@@ -63,7 +63,7 @@ def sharing_of(stage: Stage, window_s: float) -> Sharing:
     seen = used[used["kind"] == "sighting"]
     robot = seen["robot"].map(number).to_numpy(dtype=np.float64)
     known = np.isfinite(robot) & seen["landmark"].notna().to_numpy()
-    robot = robot[known].astype(np.int64)
+    robot = np.asarray(robot[known], dtype=np.int64)
     t_s = seen["t_s"].to_numpy(dtype=np.float64)[known]
     names, landmark = np.unique(
         seen["landmark"].to_numpy(dtype=object)[known].astype(str), return_inverse=True

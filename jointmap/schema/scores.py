@@ -124,7 +124,7 @@ def _rest() -> tuple[Table, ...]:
               (_RUN, _WHO, _ROBOT, text("kind", "clock, frame, covariance, jump, diverged ..."),
                text("text", "in words"))),
         Table("order", "SCORES/order.csv", "order of finish by position, common instants only",
-              (_RUN, _whole("rank", "from 1"), _WHO, _real("value", "m", "corrected figure"),
+              (_RUN, _whole("rank", "from 1"), _WHO, _real("value_m", "m", "corrected figure"),
                _real("certainty", "", "that it is not worse than the next"),
                _whole("n", "instants"), _real("support", "", "share of the longest estimate"))),
         Table("errors", "SCORES/errors.csv", "errors over time after alignment",
