@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 import shutil
 from collections.abc import Mapping
 from pathlib import Path
@@ -14,13 +13,6 @@ from jointmap.errors import LogFormatError, OutputExistsError, SurveyError
 from jointmap.ingest.mrclam import import_mrclam
 from jointmap.ingest.read import read_survey
 from jointmap.ingest.survey import VALUE_COLUMNS
-
-DATA = Path(
-    os.environ.get("JOINTMAP_DATA", Path(__file__).parents[3] / "shared" / "data" / "mrclam6")
-)
-real = pytest.mark.skipif(
-    not (DATA / "Barcodes.dat").is_file(), reason="the real run is not here (JOINTMAP_DATA)"
-)
 
 RUN = {
     "Barcodes.dat": "# Subject #    Barcode #\r\n  1 \t   5 \r\n  2 \t  14\r\n  6 72\r\n 17\t9\r\n",
@@ -155,9 +147,8 @@ def test_the_logs_are_never_overwritten(tmp_path: Path, out: str) -> None:
     assert tree(logs) == before
 
 
-@real
-def test_real_run_has_the_published_counts(tmp_path: Path) -> None:
-    report = import_mrclam(DATA, tmp_path / "survey")
+def test_real_run_has_the_published_counts(real_run: Path, tmp_path: Path) -> None:
+    report = import_mrclam(real_run, tmp_path / "survey")
     assert report.robots == tuple(f"robot-{i}" for i in range(1, 6))
     assert report.landmarks == tuple(f"landmark-{i:02d}" for i in range(6, 21))
     assert (report.n_sightings, report.n_encounters) == (15383, 3988)
@@ -165,22 +156,21 @@ def test_real_run_has_the_published_counts(tmp_path: Path) -> None:
     assert report.left_out == {}
 
 
-@real
-def test_real_run_reads_back_as_it_stands_in_the_files(tmp_path: Path) -> None:
-    import_mrclam(DATA, tmp_path / "survey")
+def test_real_run_reads_back_as_it_stands_in_the_files(real_run: Path, tmp_path: Path) -> None:
+    import_mrclam(real_run, tmp_path / "survey")
     survey = read_survey(tmp_path / "survey")
     assert survey.dimension == 2
-    barcodes = np.loadtxt(DATA / "Barcodes.dat")
+    barcodes = np.loadtxt(real_run / "Barcodes.dat")
     for n in range(1, 6):
         log = survey.robots[f"robot-{n}"]
-        odometry = np.loadtxt(DATA / f"Robot{n}_Odometry.dat")
+        odometry = np.loadtxt(real_run / f"Robot{n}_Odometry.dat")
         assert log.odometry.twist is not None
         # Rows of one stamp count once; row numbers start after the header of the CSV.
         kept = log.odometry.source.row - 2
         np.testing.assert_array_equal(log.odometry.t_s, odometry[kept, 0])
         np.testing.assert_array_equal(log.odometry.twist[:, [0, 2]], odometry[kept, 1:])
         assert len(kept) == len(np.unique(odometry[:, 0]))
-        measured = np.loadtxt(DATA / f"Robot{n}_Measurement.dat")
+        measured = np.loadtxt(real_run / f"Robot{n}_Measurement.dat")
         landmarks = np.isin(measured[:, 1], barcodes[5:, 1])
         assert log.sightings is not None
         value = log.sightings.value
@@ -192,14 +182,15 @@ def test_real_run_reads_back_as_it_stands_in_the_files(tmp_path: Path) -> None:
         assert [log.sightings.targets[i] for i in log.sightings.target] == expected
 
 
-@real
-def test_real_run_does_without_the_truth(tmp_path: Path) -> None:
+def test_real_run_does_without_the_truth(real_run: Path, tmp_path: Path) -> None:
     logs = tmp_path / "logs"
-    shutil.copytree(DATA, logs, ignore=shutil.ignore_patterns("*Groundtruth*"))
+    shutil.copytree(real_run, logs, ignore=shutil.ignore_patterns("*Groundtruth*"))
     import_mrclam(logs, tmp_path / "without" / "survey")
-    import_mrclam(DATA, tmp_path / "with" / "survey")
+    import_mrclam(real_run, tmp_path / "with" / "survey")
     kept = {k: v for k, v in tree(tmp_path / "with" / "survey").items() if "truth" not in k}
     found = tree(tmp_path / "without" / "survey")
     # The survey is named after the folder of the logs.
-    assert kept.pop("survey.toml").replace(b"mrclam6", b"logs") == found.pop("survey.toml")
+    assert kept.pop("survey.toml").replace(real_run.name.encode(), b"logs") == found.pop(
+        "survey.toml"
+    )
     assert kept == found
