@@ -14,6 +14,7 @@ consistent measurement set maximization, ICRA 2018).
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -40,12 +41,13 @@ class PointSet:
     """Positions (N, d) in one map, their covariance (N, d, d), optionally jointly (N, N, d, d).
 
     ``joint[i, j]`` is the covariance between positions i and j; without it the positions are
-    taken as independent, which overstates the uncertainty of a pair.
+    taken as independent, which overstates the uncertainty of a pair. A function of the indices
+    stands for it where only some of many points will be asked for.
     """
 
     position: Floats
     covariance: Floats
-    joint: Floats | None = None
+    joint: Floats | Callable[[Ints], Floats] | None = None
 
     @property
     def n(self) -> int:
@@ -54,15 +56,22 @@ class PointSet:
 
     def take(self, index: Ints) -> PointSet:
         """Some of the points, in the order of ``index`` (repetitions allowed)."""
-        joint = None if self.joint is None else self.joint[index[:, None], index[None, :]]
+        joint = None if self.joint is None else self._joint(index)
         return PointSet(self.position[index], self.covariance[index], joint)
+
+    def _joint(self, index: Ints) -> Floats:
+        assert self.joint is not None
+        if callable(self.joint):
+            return self.joint(index)
+        return self.joint[index[:, None], index[None, :]]
 
     def pair_covariance(self) -> Floats:
         """Covariance (N, N, d, d) of every difference of two positions."""
         own = self.covariance[:, None] + self.covariance[None, :]
         if self.joint is None:
             return np.asarray(own)
-        return np.asarray(own - self.joint - np.swapaxes(self.joint, -1, -2))
+        joint = self._joint(np.arange(self.n)) if callable(self.joint) else self.joint
+        return np.asarray(own - joint - np.swapaxes(joint, -1, -2))
 
 
 def consistency_matrix(a: PointSet, b: PointSet, form: Form, gate: float = GATE) -> Bools:

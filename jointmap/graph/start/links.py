@@ -101,9 +101,10 @@ class Hypothesis:
 
 def hypotheses(ties: Ties, form: Form, rng: np.random.Generator) -> list[Hypothesis]:
     """Return the distinct hypotheses about a link, the best first."""
-    full = ties
+    full, some = ties, np.arange(ties.nodes)
     if ties.nodes > _MOST_NODES:
-        ties = ties.take(np.sort(rng.permutation(ties.nodes)[:_MOST_NODES]))
+        some = np.sort(rng.permutation(ties.nodes)[:_MOST_NODES])
+    ties = ties.take(some)
     adjacency = node_consistency(ties, form)
     weights = KIND_WEIGHT[ties.kind]
     first, _ = maximum_clique(adjacency, weights, node_cap=20_000)

@@ -101,9 +101,33 @@ def ties_between(material: Material, teams: Teams, g: int, h: int) -> tuple[Ties
 
 
 def _points(material: Material, teams: Teams, index: Ints) -> PointSet:
-    """Features in their group frame with joint covariance (zero between units)."""
+    """Features in their group frame; the joint covariance of some of them when asked for."""
+    f = material.features
+    return PointSet(
+        material.lie.transform(teams.pose[f.unit[index]], f.position[index]),
+        _own_covariance(material, teams, index),
+        lambda some: _joint_covariance(material, teams, index[some]),
+    )
+
+
+def _own_covariance(material: Material, teams: Teams, index: Ints) -> Floats:
+    """Covariance (n, d, d) of each feature in its group frame."""
     f, lie = material.features, material.lie
-    pose = teams.pose[f.unit[index]]
+    own = np.empty((len(index), lie.dim, lie.dim))
+    for u in np.unique(f.unit[index]):
+        members, block = material.joint[u]
+        mine = np.flatnonzero(f.unit[index] == u)
+        place = np.searchsorted(members, index[mine])
+        own[mine] = block[place, place]
+    jacobian = point_jacobian(f.position[index])
+    own += jacobian @ teams.covariance[f.unit[index]] @ np.swapaxes(jacobian, -1, -2)
+    turn = lie.rotation(teams.pose[f.unit[index]])
+    return np.asarray(turn @ own @ np.swapaxes(turn, -1, -2))
+
+
+def _joint_covariance(material: Material, teams: Teams, index: Ints) -> Floats:
+    """Joint covariance (n, n, d, d) of features in their group frame, zero between units."""
+    f, lie = material.features, material.lie
     n, d = len(index), lie.dim
     joint = np.zeros((n, n, d, d))
     for u in np.unique(f.unit[index]):
@@ -111,12 +135,12 @@ def _points(material: Material, teams: Teams, index: Ints) -> PointSet:
         mine = np.flatnonzero(f.unit[index] == u)
         place = np.searchsorted(members, index[mine])
         turn = lie.rotation(teams.pose[u])
-        jacobian = point_jacobian(f.position[index[mine]])
-        common = np.einsum("iab,bc,jdc->ijad", jacobian, teams.covariance[u], jacobian)
+        flat = point_jacobian(f.position[index[mine]]).reshape(-1, lie.dof)
+        common = flat @ teams.covariance[u] @ flat.T
+        common = common.reshape(len(mine), d, len(mine), d).swapaxes(1, 2)
         part = block[place[:, None], place[None, :]] + common
         joint[mine[:, None], mine[None, :]] = turn @ part @ turn.T
-    diagonal = joint[np.arange(n), np.arange(n)]
-    return PointSet(lie.transform(pose, f.position[index]), diagonal, joint)
+    return joint
 
 
 def grow(material: Material, teams: Teams, seed: int = 0) -> Teams:
@@ -240,21 +264,7 @@ def total_agreement(material: Material, teams: Teams) -> float:
     if not len(rows):
         return 0.0
     nodes, node = np.unique(p.node[rows], return_inverse=True)
-    sides = []
-    for index in (p.left[rows], p.right[rows]):
-        pose = teams.pose[f.unit[index]]
-        turn = material.lie.rotation(pose)
-        own = np.empty((len(index), material.lie.dim, material.lie.dim))
-        for u in np.unique(f.unit[index]):
-            members, block = material.joint[u]
-            mine = np.flatnonzero(f.unit[index] == u)
-            place = np.searchsorted(members, index[mine])
-            own[mine] = block[place, place]
-        jacobian = point_jacobian(f.position[index])
-        spread = teams.covariance[f.unit[index]]
-        own += jacobian @ spread @ np.swapaxes(jacobian, -1, -2)
-        own = turn @ own @ np.swapaxes(turn, -1, -2)
-        sides.append(PointSet(material.lie.transform(pose, f.position[index]), own))
+    sides = [_points(material, teams, index) for index in (p.left[rows], p.right[rows])]
     ties = Ties(sides[0], sides[1], node.ravel(), p.kind[nodes], p.key[nodes])
     d = material.lie.dim
     return weight_of(ties, agreement(ties, np.eye(d), np.zeros(d)))

@@ -7,6 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from jointmap.graph.start import row_kernels
+
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
@@ -90,15 +92,27 @@ def _normalised(rows: SightingRows, x: Floats, y: Floats, z: Floats) -> tuple[Fl
 
 def robust_cost(rows: SightingRows, points: Floats) -> Floats:
     """Cost (n,) of each row at a point (n, d): c m log(1 + s / (c m)), m components."""
-    residual, _ = _normalised(rows, *_local(rows, points))
-    limit = CAUCHY2 * np.maximum(np.isfinite(rows.value).sum(axis=1), 1)
-    return np.asarray(limit * np.log1p(np.sum(residual**2, axis=1) / limit))
+    return np.asarray(row_kernels.robust_cost(*_flat(rows), np.ascontiguousarray(points), CAUCHY2))
 
 
-def cauchy_weight(rows: SightingRows, residual: Floats) -> Floats:
-    """Weight (n,) of rows that matches the robust cost, from their normalised residuals (n, 6)."""
-    limit = CAUCHY2 * np.maximum(np.isfinite(rows.value).sum(axis=1), 1)
-    return np.asarray(1.0 / (1.0 + np.sum(residual**2, axis=1) / limit))
+def normal_equations(rows: SightingRows, points: Floats) -> tuple[Floats, Floats]:
+    """J^T W J (G, d, d) and -J^T W r (G, d) of every group at points (G, d), Cauchy weights.
+
+    Groups without a point (NaN) get zeros.
+    """
+    groups, d = points.shape
+    normal, gradient = np.zeros((groups, d, d)), np.zeros((groups, d))
+    group = np.ascontiguousarray(rows.group, dtype=np.int64)
+    row_kernels.normal_equations(
+        group, *_flat(rows), np.ascontiguousarray(points), CAUCHY2, normal, gradient
+    )
+    return normal, gradient
+
+
+def _flat(rows: SightingRows) -> tuple[Floats, Floats, Floats, Floats]:
+    """The arrays in the layout that the compiled loops are made for."""
+    made = (rows.origin, rows.rotation, rows.value, rows.sigma)
+    return tuple(np.ascontiguousarray(a, dtype=np.float64) for a in made)  # type: ignore[return-value]
 
 
 def sum_by_group(group: Ints, values: Floats, groups: int) -> Floats:

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from jointmap.graph.start.candidates import candidate_points
 from jointmap.graph.start.rows import (
     SightingRows,
-    cauchy_weight,
+    normal_equations,
     residuals,
     robust_cost,
     sum_by_group,
@@ -95,7 +95,7 @@ def _descend(
         cost = sum_by_group(rows.group, robust_cost(rows, point[rows.group]), groups)
         better = cost < best_cost
         best[better], best_cost[better] = point[better], cost[better]
-        fresh_normal, fresh_gradient = _normal_equations(rows, best, groups)
+        fresh_normal, fresh_gradient = normal_equations(rows, best)
         normal, gradient = fresh_normal, fresh_gradient
         best_normal[better] = normal[better]
         damping = np.where(better, damping * 0.2, damping * 8.0)
@@ -103,15 +103,6 @@ def _descend(
     empty = np.isnan(start).any(axis=1)
     best[empty], best_cost[empty] = np.nan, np.inf
     return best, best_cost, best_normal
-
-
-def _normal_equations(rows: SightingRows, points: Floats, groups: int) -> tuple[Floats, Floats]:
-    residual, jacobian = residuals(rows, points[rows.group])
-    weight = np.nan_to_num(cauchy_weight(rows, residual))
-    jacobian, residual = np.nan_to_num(jacobian), np.nan_to_num(residual)
-    normal = np.einsum("n,nki,nkj->nij", weight, jacobian, jacobian)
-    gradient = -np.einsum("n,nki,nk->ni", weight, jacobian, residual)
-    return sum_by_group(rows.group, normal, groups), sum_by_group(rows.group, gradient, groups)
 
 
 def _solve(normal: Floats, gradient: Floats, damping: Floats) -> Floats:
