@@ -25,8 +25,9 @@ ODOMETRY_GATE = 1.0 - 1e-7
 #: A step this many times beyond the gate counts as a jump and keeps only a nominal weight.
 JUMP_RATIO = 10.0
 JUMP_WEIGHT = 1e-8
-#: Quantile at which the spread of a block's statistics is read, to gate against its real scale.
-_SCALE_QUANTILE = 0.5
+#: Quantiles at which the spread of a block's statistics is read, to gate against its real scale;
+#: the lower one holds where most of the rows are wrong.
+_SCALE_QUANTILES = (0.25, 0.5)
 _SCALE_LEAST = 20
 
 
@@ -46,13 +47,14 @@ def statistic_scale(statistic: Floats, dof: Floats) -> float:
     """Robust variance factor (at least 1) of a block's test statistics.
 
     Sigmas that are too small would turn half of the good rows into suspects; the gate is therefore
-    taken relative to the median of the statistics over the median of their chi-square law.
+    taken relative to quantiles of the statistics over those of their chi-square law. Too small
+    sigmas stretch all quantiles alike, wrong rows the upper ones: the smallest ratio counts.
     """
     good = dof > 0
     if good.sum() < _SCALE_LEAST:
         return 1.0
-    ratio = statistic[good] / chi2.ppf(_SCALE_QUANTILE, dof[good])
-    return max(1.0, float(np.median(ratio)))
+    ratios = [np.quantile(statistic[good] / chi2.ppf(q, dof[good]), q) for q in _SCALE_QUANTILES]
+    return max(1.0, float(min(ratios)))
 
 
 def gate_rows(
