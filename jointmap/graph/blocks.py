@@ -170,7 +170,8 @@ def observation_blocks(
     for rows, reason in reasons:
         _drop(made, kind, robot, table, rows, t_s, reason)
     usable = keep & reached & other_reached
-    parts = split_by_components(table, usable, survey.dimension, kind)
+    given = {name: sensor.sigma for name, sensor in log.sensors.items()}
+    parts = split_by_components(table, usable, survey.dimension, kind, given)
     _drop(made, kind, robot, table, parts.empty, t_s, "no component observed")
     for part in parts.parts:
         made.blocks.append(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -39,8 +40,16 @@ class Parts:
     empty: Bools
 
 
-def split_by_components(table: Observations, usable: Bools, dimension: int, kind: str) -> Parts:
+def split_by_components(
+    table: Observations,
+    usable: Bools,
+    dimension: int,
+    kind: str,
+    given: Mapping[str, Mapping[str, float]] | None = None,
+) -> Parts:
     """Group rows (n,) by sensor and by which components they carry.
+
+    ``given``: standard deviations that the survey states for each sensor, by name without prefix.
 
     A row with position and orientation becomes one relative pose; range, bearing and elevation
     are turned into the position with their covariance when an orientation comes with them. An
@@ -70,7 +79,8 @@ def split_by_components(table: Observations, usable: Bools, dimension: int, kind
         name = table.sensors[sensor]
         rows = np.flatnonzero(mine & pose)
         if len(rows):
-            parts.append(_pose_rows(table, rows, name, dimension, cartesian))
+            sigma = (given or {}).get(name, {})
+            parts.append(_pose_rows(table, rows, name, dimension, cartesian, sigma))
         for pattern in np.unique(code[mine & rest]):
             if pattern == 0:
                 continue
@@ -98,25 +108,21 @@ def _point_rows(table: Observations, rows: Ints, sensor: str, pattern: int) -> O
 
 
 def _pose_rows(
-    table: Observations, rows: Ints, sensor: str, dimension: int, cartesian: Bools
+    table: Observations,
+    rows: Ints,
+    sensor: str,
+    dimension: int,
+    cartesian: Bools,
+    given: Mapping[str, float],
 ) -> ObservedRows:
     group = frames.group(dimension)
-    value, sigma = table.value[rows], table.sigma[rows]
+    value = table.value[rows]
     xyz = value[:, 3 : 3 + dimension]
     polar = ~cartesian[rows]
     xyz = np.where(polar[:, None], _from_polar(value, dimension), xyz)
     turn = value[:, 6:7] if dimension == 2 else value[:, 7:11]
     obs = group.from_rows(np.concatenate([xyz, turn], axis=1))
-    wanted = ("x_m", "y_m", "rz_rad") if dimension == 2 else (
-        "x_m", "y_m", "z_m", "rx_rad", "ry_rad", "rz_rad"
-    )  # fmt: skip
-    spread = sigma[:, [SIGMA_COLUMNS.index(n) for n in wanted]]
-    full = np.full((len(rows), group.dof, group.dof), np.nan)
-    stated = np.isfinite(spread).all(axis=1)
-    full[stated] = (spread[stated, :, None] * np.eye(group.dof)) ** 2
-    if table.cov is not None:
-        own = np.isfinite(table.cov[rows]).all(axis=(1, 2))
-        full[own] = table.cov[rows][own]
+    full = _pose_covariance(table, rows, dimension, polar, given)
     return ObservedRows(
         sensor,
         ("pose",),
@@ -125,6 +131,72 @@ def _pose_rows(
         np.full((len(rows), group.dof), np.nan),
         group.covariance_from_table(obs, full),
     )
+
+
+def _pose_covariance(
+    table: Observations, rows: Ints, dimension: int, polar: Bools, given: Mapping[str, float]
+) -> Floats:
+    """Stated covariance (n, dof, dof) of relative poses, table order, NaN where not stated.
+
+    A position seen by range and angles gets theirs, to first order; what the row does not state
+    of them the sensor does. (A sensor's sigmas of Cartesian rows are terms of the noise model,
+    which the data may correct; those of a converted row have no term of their own there.)
+    """
+    sigma = table.sigma[rows]
+    turned = ("rz_rad",) if dimension == 2 else ("rx_rad", "ry_rad", "rz_rad")
+    wanted = ("x_m", "y_m", "z_m")[:dimension]
+    dof = dimension + len(turned)
+    place, turn = np.arange(dimension), np.arange(dimension, dof)
+    full = np.zeros((len(rows), dof, dof))
+    full[:, place, place] = sigma[:, [SIGMA_COLUMNS.index(n) for n in wanted]] ** 2
+    full[:, turn, turn] = sigma[:, [SIGMA_COLUMNS.index(n) for n in turned]] ** 2
+    if polar.any():
+        angular = np.array([given.get(name, np.nan) for name in turned]) ** 2
+        mine = full[polar]
+        mine[:, turn, turn] = np.where(
+            np.isfinite(mine[:, turn, turn]), mine[:, turn, turn], angular
+        )
+        mine[:, :dimension, :dimension] = _polar_covariance(
+            table.value[rows[polar]], sigma[polar], given, dimension
+        )
+        full[polar] = mine
+    full[~np.isfinite(full).all(axis=(1, 2))] = np.nan
+    if table.cov is not None:
+        own = np.isfinite(table.cov[rows]).all(axis=(1, 2))
+        full[own] = table.cov[rows][own]
+    return full
+
+
+def _polar_covariance(
+    value: Floats, sigma: Floats, given: Mapping[str, float], dimension: int
+) -> Floats:
+    """Covariance (n, d, d) of positions from the sigmas (n, 9) of bearing, elevation and range."""
+    b, r = value[:, 0], value[:, 2]
+    e = value[:, 1] if dimension == 3 else np.zeros(len(value))
+    if "range_m" in given or "range_per_m" in given:
+        range_sigma = np.hypot(given.get("range_m", 0.0), given.get("range_per_m", 0.0) * r)
+    else:
+        range_sigma = np.full(len(value), np.nan)
+    model = np.stack(
+        [
+            np.full(len(value), given.get("bearing_rad", np.nan)),
+            np.full(len(value), given.get("elevation_rad", np.nan)),
+            range_sigma,
+        ],
+        axis=1,
+    )
+    spread = np.where(np.isfinite(sigma[:, :3]), sigma[:, :3], model)
+    zero = np.zeros(len(value))
+    cb, sb, ce, se = np.cos(b), np.sin(b), np.cos(e), np.sin(e)
+    columns = [
+        np.stack([-r * ce * sb, r * ce * cb, zero], axis=1),
+        np.stack([-r * se * cb, -r * se * sb, r * ce], axis=1),
+        np.stack([ce * cb, ce * sb, se], axis=1),
+    ]
+    used = (0, 2) if dimension == 2 else (0, 1, 2)
+    jacobian = np.stack([columns[k][:, :dimension] for k in used], axis=2)
+    scaled = jacobian * spread[:, None, list(used)]
+    return np.asarray(scaled @ np.swapaxes(scaled, 1, 2))
 
 
 def _from_polar(value: Floats, dimension: int) -> Floats:
