@@ -12,8 +12,9 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.stats import chi2
 
-from jointmap.errors import IndeterminateError, SurveyError
+from jointmap.errors import IndeterminateError, SettingsError, SurveyError
 from jointmap.graph.build import BuildSettings, build_problem
 from jointmap.graph.calibrate import (
     Calibration,
@@ -25,6 +26,7 @@ from jointmap.graph.calibrate import (
 from jointmap.graph.noise import Noise, block_covariance, initial_noise, whitening
 from jointmap.graph.problem import Problem, State
 from jointmap.graph.start import StartResult, initial_state
+from jointmap.ingest.problems import did_you_mean
 from jointmap.ingest.survey import Survey
 from jointmap.products.assemble import assemble
 from jointmap.products.reference import Reference
@@ -33,19 +35,26 @@ from jointmap.settings import Settings
 from jointmap.solve import gnc
 from jointmap.solve.associations import Review, review
 from jointmap.solve.decisions import Decisions, gate_rows, statistic_scale
+from jointmap.solve.disputed import Mixed, Undecided
 from jointmap.solve.graduate import graduate
 from jointmap.solve.kernels import Kernel, RobustLoss
 from jointmap.solve.linear import Ordering, system_order
 from jointmap.solve.optimise import Optimised, OptimiseSettings, optimise
 from jointmap.solve.session import (
     first_state,
+    shared_models,
     system_of,
     undetermined,
     usable_rows,
     whiten_blocks,
+    with_distances,
 )
+from jointmap.solve.shared import SharedModel
 from jointmap.solve.system import Part, System, linearise, linearise_system, whitened_norm
-from jointmap.trust.components import update_noise
+from jointmap.trust.components import update_motion_noise, update_noise
+from jointmap.trust.correlation import split_by_correlation
+from jointmap.trust.deleted import fair_statistic
+from jointmap.trust.holdout import enlarged, hold_out
 from jointmap.trust.loose import find_loose
 from jointmap.trust.outcome import Outcome, association_evidence
 from jointmap.trust.quality import Quality, assess
@@ -55,8 +64,22 @@ Bools = NDArray[np.bool_]
 
 #: Noise has settled when no well-determined sigma changes by more than this factor in a round.
 SETTLED = 1.05
+#: The same for the first rounds, whose noise the final solve refines.
+SETTLED_ROUGHLY = 1.15
+#: Step of the odometry calibration, in prior sigmas, below which it stands still; the second where
+#: noise is estimated along.
+CALIBRATED, CALIBRATED_CHAINED = 1e-3, 0.02
+#: Relative decrease of the objective at which a solve inside a loop stops, and the last ones.
+COARSE, FINE = 1e-5, 1e-9
+#: Probability that a good row agrees with the others of its spell.
+STRAY_GATE = 1.0 - 1e-6
+#: Kinds whose rows may return by what the others predict. Not sightings: of a landmark that little
+#: else places, its association decides.
+RETURNING = ("closure", "encounter", "fix")
 #: Share of rows whose verdict may still flip when the final solve stands.
 EDGE_SHARE = 2e-4
+#: The same where noise is estimated along, which keeps the gates moving a little.
+EDGE_SHARE_CHAINED = 2e-3
 
 
 @dataclass
@@ -75,6 +98,10 @@ class _Run:
     review: Review | None = None
     sensitivity: dict[int, Floats] | None = None
     ordering: tuple[bytes, Ordering] | None = None
+    chained: bool = False
+    settled: bool = True
+    stray: list[Bools] | None = None
+    returned: list[Bools] | None = None
     notes: list[str] = field(default_factory=list)
 
 
@@ -98,6 +125,8 @@ def fuse(
 
     Raises
     ------
+    SettingsError
+        The datum is to start at a robot that the survey has not.
     SurveyError
         The survey has nothing to solve.
     IndeterminateError
@@ -106,8 +135,13 @@ def fuse(
     """
     settings = settings or Settings()
     progress = progress or Silent()
+    named = settings.datum_robot
+    if named is not None and named not in survey.robots:
+        mend = did_you_mean(named, survey.robots)
+        raise SettingsError(f"the survey has no robot {named!r} for the datum; {mend}")
     run = _prepare(survey, settings, progress)
-    settled, system, done, quality = _solved(run)
+    system, done, quality = _solved(run)
+    evidence = hold_out(run.problem, system, quality)
     progress.stage("products")
     outcome = Outcome(
         survey=survey,
@@ -118,27 +152,28 @@ def fuse(
         review=run.review,
         system=system,
         state=done.state,
-        quality=quality,
+        quality=enlarged(quality, evidence.factor),
         start=run.start,
         optimised=done,
-        settled=settled,
+        settled=run.settled,
         notes=tuple(run.notes),
+        holdout=evidence,
     )
     reference = assemble(outcome, settings, progress)
     progress.finish()
     return reference
 
 
-def _solved(run: _Run) -> tuple[bool, System, Optimised, Quality]:
+def _solved(run: _Run) -> tuple[System, Optimised, Quality]:
     """All solves; where the system turns out singular, once more without the ties that are loose.
 
-    Returns whether noise and decisions settled, the last system, its solution and quality.
+    Returns the last system, its solution and quality.
     """
     while True:
         try:
             _robust(run)
-            settled = _rounds(run)
-            return settled, *_final(run)
+            _rounds(run)
+            return _final(run)
         except IndeterminateError as error:
             _cut_loose(run, error)
 
@@ -162,6 +197,7 @@ def _cut_loose(run: _Run, error: IndeterminateError) -> None:
     usable = tuple(a & ~rows for a, rows in zip(before.usable, loose.rows, strict=True))
     used = tuple(a & ~rows for a, rows in zip(before.used, loose.rows, strict=True))
     run.decisions = replace(before, accepted=accepted, usable=usable, used=used)
+    run.chained = False
     _place_shared(run)
     n = sum(int(rows.sum()) for rows in loose.rows)
     what = [f"{len(loose.links)} associations"] if len(loose.links) else []
@@ -211,14 +247,34 @@ def _drop_loose(run: _Run) -> None:
     run.decisions = replace(run.decisions, usable=usable, used=usable)
 
 
-def _system(run: _Run, *, robust: bool, used: tuple[Bools, ...] | None = None) -> System:
+def _system(
+    run: _Run,
+    *,
+    robust: bool,
+    used: tuple[Bools, ...] | None = None,
+    undecided: bool = False,
+) -> System:
     kernel = _robust_loss(run.settings) if robust else None
-    whiten = whiten_blocks(run.problem, run.noise)
+    if undecided and kernel is not None:
+        kernel = Undecided(kernel)
+    shared: dict[int, SharedModel] = {}
+    sensors: tuple[tuple[int, str], ...] = ()
+    if run.chained and kernel is None and used is None:
+        shared, sensors = shared_models(run.problem, run.noise, constant=run.settings.calibrate)
+    whiten = whiten_blocks(run.problem, run.noise, shared)
     if run.sensitivity is None:
         run.sensitivity = odometry_sensitivity(run.problem, run.survey, run.calibration)
     decisions = run.decisions if used is None else replace(run.decisions, used=used)
     return system_of(
-        run.problem, whiten, decisions, run.state, kernel, run.sensitivity, run.calibration
+        run.problem,
+        whiten,
+        decisions,
+        run.state,
+        kernel,
+        run.sensitivity,
+        run.calibration,
+        shared,
+        sensors,
     )
 
 
@@ -246,6 +302,7 @@ def _ordering(run: _Run, system: System) -> Ordering:
     """Elimination ordering of a system, made once for each set of variables."""
     layout = system.layout
     key = layout.landmark_of_key.tobytes() + layout.calibration_key.tobytes()
+    key += b"" if system.extras is None else system.extras.dims.tobytes()
     if run.ordering is None or run.ordering[0] != key:
         graph = linearise_system(system, run.state).graph
         run.ordering = (key, system_order(system, graph))
@@ -263,6 +320,8 @@ def _absorb(run: _Run, done: Optimised) -> float:
         run.problem = reintegrate(run.problem, run.survey, run.calibration, run.settings.gap_s)
         run.sensitivity = None
     run.state = replace(done.state, calibration={})
+    if _estimates_noise(run):
+        run.problem = with_distances(run.problem, run.state)
     return step
 
 
@@ -271,10 +330,18 @@ def _robust(run: _Run) -> None:
     run.progress.stage("robust solve")
     if run.settings.kernel == gnc.NAME:
         _absorb(run, _graduate(run))
+    _settle_disputes(run)
     for _ in range(4 if calibrated_robots(run.calibration) else 1):
         if _absorb(run, _optimise(run, _system(run, robust=True), 1e-3)) < 0.02:
             break
     _gate_by_norm(run, _system(run, robust=True))
+
+
+def _settle_disputes(run: _Run) -> None:
+    """Let the rest of the survey choose between odometry steps and closures that contradict them."""
+    system = _system(run, robust=True, undecided=True)
+    if any(isinstance(part.kernel, Mixed) for part in system.parts):
+        _absorb(run, _optimise(run, system, 1e-4))
 
 
 def _graduate(run: _Run) -> Optimised:
@@ -306,7 +373,7 @@ def _gate_by_norm(run: _Run, system: System) -> None:
 def _own_statistic(run: _Run, system: System, part: Part) -> Floats:
     """Squared residual (n,) of each row in units of its own sigma, not of its burst's."""
     covariance = block_covariance(part.block, run.problem, run.noise, single=True)
-    residual = linearise(system, part, run.state, jacobians=False).residual
+    residual = linearise(system, part, run.state, jacobians=False, total=True).residual
     return whitened_norm(np.einsum("nij,nj->ni", whitening(covariance), residual)) ** 2
 
 
@@ -315,7 +382,7 @@ def _rounds(run: _Run) -> bool:
 
     Returns whether they settled.
     """
-    estimate = run.settings.noise == "estimated" and any(t.free for t in run.noise.terms.values())
+    estimate = _estimates_noise(run)
     if not estimate and not _doubted_tracks(run):
         # Nothing to learn from the robust state that the final solve would not show better.
         return True
@@ -328,11 +395,15 @@ def _rounds(run: _Run) -> bool:
                 run.problem, run.noise, system, quality, first=number == 0
             )
         moved = _review(run, system, quality)
-        if not moved and change < SETTLED:
+        if not moved and change < SETTLED_ROUGHLY:
             return True
         _absorb(run, _optimise(run, _system(run, robust=True), 1e-3))
         _gate_by_norm(run, _system(run, robust=True))
     return False
+
+
+def _estimates_noise(run: _Run) -> bool:
+    return run.settings.noise == "estimated" and any(t.free for t in run.noise.terms.values())
 
 
 def _doubted_tracks(run: _Run) -> bool:
@@ -382,17 +453,40 @@ def _place_shared(run: _Run) -> None:
 def _final(run: _Run) -> tuple[System, Optimised, Quality]:
     """The inlier set at full weight; rows and associations are tested once more in it."""
     run.progress.stage("final solve")
+    if _estimates_noise(run):
+        apart = _system(run, robust=False)
+        run.noise = split_by_correlation(run.problem, run.noise, apart, run.state)
+        run.chained = True
     for number in range(run.settings.max_rounds):
         system = _system(run, robust=False)
-        done = _optimise(run, system, 1e-9)
+        done = _optimise(run, system, COARSE if run.chained else FINE)
         step = _absorb(run, done)
         system = _system(run, robust=False)
         quality = assess(system, run.state, _ordering(run, system))
         changed = _review_rows(run, system, quality)
         changed |= _review(run, system, quality)
-        if (not changed and step < 1e-3) or number == run.settings.max_rounds - 1:
+        noise, change = run.noise, 1.0
+        if run.chained:
+            noise, change = update_motion_noise(run.problem, run.noise, system, quality)
+        still = CALIBRATED_CHAINED if run.chained else CALIBRATED
+        run.settled = not changed and step < still and change < SETTLED
+        if run.settled or number == run.settings.max_rounds - 1:
             break
+        run.noise = noise
     return system, replace(done, state=run.state), quality
+
+
+def _stray_rows(run: _Run, system: System, quality: Quality) -> list[Bools]:
+    """Rows (per block) that contradict the others of their own spell; once out, they stay out."""
+    if run.stray is None:
+        run.stray = [np.zeros(b.n, dtype=bool) for b in run.problem.blocks]
+    for part, white in zip(system.parts, quality.white, strict=True):
+        if white is None:
+            continue
+        statistic, dof = white.statistic()
+        keep, _ = gate_rows(part.block, statistic, dof, STRAY_GATE)
+        run.stray[part.at][part.index[~keep]] = True
+    return run.stray
 
 
 def _review_rows(run: _Run, system: System, quality: Quality) -> bool:
@@ -401,6 +495,7 @@ def _review_rows(run: _Run, system: System, quality: Quality) -> bool:
     used = [rows.copy() for rows in before]
     scales: dict[int, float] = {}
     gate = run.settings.gate_measurement
+    stray = _stray_rows(run, system, quality)
     for part, stats in zip(system.parts, quality.parts, strict=True):
         if part.block.kind == "odometry":
             continue
@@ -416,11 +511,69 @@ def _review_rows(run: _Run, system: System, quality: Quality) -> bool:
         for part in outside.parts:
             norm2 = _own_statistic(run, outside, part)
             dof = np.full(len(norm2), float(part.whiten.shape[1]))
-            keep, _ = gate_rows(part.block, norm2, dof, gate, scales.get(part.at, 1.0))
+            scale = scales.get(part.at, 1.0)
+            keep, _ = gate_rows(part.block, norm2, dof, gate, scale)
+            keep |= _returning(run, system, quality, outside, part, ~keep, scale)
             used[part.at][part.index] = keep
+    used = [rows & ~out for rows, out in zip(used, stray, strict=True)]
     changed = sum(int((a != b).sum()) for a, b in zip(before, used, strict=True))
+    lifted = _lift_odometry(run, system, quality)
     # A handful of rows on the very edge of the gate is not worth another solve.
-    if changed <= EDGE_SHARE * sum(rows.sum() for rows in before):
+    if not lifted and changed <= EDGE_SHARE * sum(rows.sum() for rows in before):
         return False
     run.decisions = replace(run.decisions, used=tuple(used))
     return True
+
+
+def _returning(
+    run: _Run,
+    system: System,
+    quality: Quality,
+    outside: System,
+    part: Part,
+    asked: Bools,
+    scale: float,
+) -> Bools:
+    """Rows (n,) left out that agree within what the others predict; each may return once."""
+    if run.returned is None:
+        run.returned = [np.zeros(b.n, dtype=bool) for b in run.problem.blocks]
+    out = np.zeros(len(asked), dtype=bool)
+    index = np.flatnonzero(asked & ~run.returned[part.at][part.index])
+    if part.block.kind not in RETURNING or not len(index):
+        return out
+    covariance = block_covariance(part.block, run.problem, run.noise, single=True)[index]
+    statistic, dof = fair_statistic(
+        system, quality, outside, part, run.state, index, covariance, np.zeros(len(index))
+    )
+    limit = chi2.ppf(run.settings.gate_measurement, np.maximum(dof, 1)) * scale
+    out[index] = (statistic <= limit) & (dof > 0)
+    run.returned[part.at][part.index[out]] = True
+    return out
+
+
+def _lift_odometry(run: _Run, system: System, quality: Quality) -> bool:
+    """Give steps that were doubted at the robust solution the weight that they deserve by now.
+
+    Says whether any weight rose. No weight falls: the chain is doubted only where a kernel shows
+    its slips, since in a solve at full weight the neighbours of a slip look as bad as the slip.
+    """
+    weights = [w.copy() for w in run.decisions.weight]
+    risen = False
+    for part in system.parts:
+        weight = weights[part.at][part.index]
+        index = np.flatnonzero(weight < 1.0)
+        if part.block.kind != "odometry" or not len(index):
+            continue
+        own = _own_statistic(run, system, part)
+        scale = statistic_scale(own, np.full(len(own), float(part.whiten.shape[1])))
+        covariance = block_covariance(part.block, run.problem, run.noise, single=True)[index]
+        statistic, dof = fair_statistic(
+            system, quality, system, part, run.state, index, covariance, weight[index]
+        )
+        statistic = np.where(np.isfinite(statistic), statistic, np.inf)
+        _, fair = gate_rows(part.block, statistic, dof, run.settings.gate_measurement, scale)
+        better = (fair > 1.1 * weight[index]) & (dof > 0)
+        weights[part.at][part.index[index[better]]] = fair[better]
+        risen |= bool(better.any())
+    run.decisions = replace(run.decisions, weight=tuple(weights))
+    return risen

@@ -107,6 +107,9 @@ class Block:
     t_s : (n,) survey time; ``source`` where the rows come from (odometry: the first row used).
     burst : (n,) int
         Rows of one robot, sensor and target in unbroken sequence share a burst number.
+    distance : (n,) or None
+        Range of each row by the present solution, for noise that grows with range; None: not
+        solved yet, the observed range stands in.
     """
 
     kind: Kind
@@ -124,6 +127,7 @@ class Block:
     t_s: Floats
     source: Provenance
     burst: Ints
+    distance: Floats | None = None
 
     @property
     def n(self) -> int:
@@ -183,10 +187,12 @@ class State:
     ``poses`` (P, 3) as x, y, yaw or (P, 3, 4) as [R | t]; ``landmarks`` (L, dimension), NaN where
     a landmark has no value; ``orientations`` maps an oriented landmark to nothing more than its
     rotation (L, dim, dim), identity for points; ``calibration`` scalar states by name
-    ``(robot, sensor, parameter)``.
+    ``(robot, sensor, parameter)``; ``extra`` (X,) the constant and shared errors of sensors, whose
+    meaning depends on the system that made them (None: all zero).
     """
 
     poses: Floats
     landmarks: Floats
     orientations: Floats | None = None
     calibration: Mapping[tuple[str, str, str], float] = field(default_factory=dict)
+    extra: Floats | None = None

@@ -7,11 +7,11 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from jointmap.products.columns import complete
 from jointmap.products.listed import (
     association_table,
     calibration_table,
     component_numbers,
+    holdout_table,
     landmark_table,
     noise_table,
 )
@@ -23,7 +23,6 @@ from jointmap.products.verdict import Judged, judge
 from jointmap.progress import Progress
 from jointmap.settings import Settings, environment_versions
 from jointmap.solve.layout import n_landmarks
-from jointmap.solve.system import link_rows
 from jointmap.trust.checked import judge_trust
 from jointmap.trust.frame import Expressed, express, position_sigma
 from jointmap.trust.outcome import Outcome
@@ -48,7 +47,6 @@ def assemble(outcome: Outcome, settings: Settings, progress: Progress) -> Refere
     associations = association_table(outcome)
     suspects = suspect_table(outcome, measurements)
     judged = judge(outcome, settings, robots, landmarks, associations, measurements, suspects)
-    holdout = complete("holdout", problem.dimension, pd.DataFrame())
     return Reference(
         meta=_meta(outcome, settings, progress, expressed, judged, measurements, kind, robot),
         trajectories=paths,
@@ -58,7 +56,7 @@ def assemble(outcome: Outcome, settings: Settings, progress: Progress) -> Refere
         noise=noise_table(outcome),
         calibration=calibration_table(outcome),
         suspects=suspects,
-        holdout=holdout,
+        holdout=holdout_table(outcome),
         robots=robots,
         state=_state(outcome, expressed),
     )
@@ -110,24 +108,29 @@ def _meta(
         },
         "chi2": chi2,
         "dof": dof,
-        "evidence": {"links": list(judged.links), "holdout": None, **judged.evidence},
+        "evidence": {"links": list(judged.links), "holdout": _holdout(outcome), **judged.evidence},
         "distrust": list(judged.distrust),
         "timings": dict(progress.timings),
     }
 
 
+def _holdout(outcome: Outcome) -> dict[str, float] | None:
+    whole = outcome.holdout.whole
+    if whole is None:
+        return None
+    return {
+        "normalized_square": whole.normalized_square,
+        "n_effective": whole.n_effective,
+        "lower": whole.lower,
+        "upper": whole.upper,
+        "sigma_factor": outcome.holdout.factor,
+    }
+
+
 def chi_square(outcome: Outcome) -> tuple[float, int]:
     """Sum of squared whitened residuals at the inlier set, and its degrees of freedom."""
-    total, rows = 0.0, 0
-    for stats in outcome.quality.parts:
-        total += float(np.einsum("nm,nm->", stats.whitened, stats.whitened))
-        rows += stats.whitened.size
-    if outcome.quality.links is not None:
-        total += float((outcome.quality.links.whitened**2).sum())
-        tied = link_rows(outcome.system, outcome.state, jacobians=False)
-        rows += sum(group.rhs.size for _, group in tied)
-    rows += 3 * int(outcome.calibration.free.sum()) + int(outcome.quality.gauge.free.sum())
-    return total, rows - int(outcome.system.layout.dims.sum())
+    quality = outcome.quality
+    return quality.chi2, quality.rows - int(outcome.system.layout.dims.sum())
 
 
 def _state(outcome: Outcome, expressed: Expressed) -> dict[str, Any]:

@@ -16,6 +16,7 @@ from jointmap.products.columns import TRUST as TRUST_WORDS
 from jointmap.products.columns import complete, pack_covariance, table_covariance_columns
 from jointmap.products.measured import landmark_names
 from jointmap.schema import pose_columns
+from jointmap.solve.shared import SENSOR_PARAMETERS, SENSOR_PRIOR
 from jointmap.trust.checked import Trust
 from jointmap.trust.frame import Expressed
 from jointmap.trust.outcome import Outcome
@@ -238,6 +239,7 @@ def calibration_table(outcome: Outcome) -> pd.DataFrame:
                     "used": True,
                 }
             )
+    rows += _sensor_rows(outcome)
     columns = [
         "robot",
         "sensor",
@@ -249,3 +251,47 @@ def calibration_table(outcome: Outcome) -> pd.DataFrame:
         "used",
     ]
     return complete("calibration", outcome.problem.dimension, pd.DataFrame(rows, columns=columns))
+
+
+def _sensor_rows(outcome: Outcome) -> list[dict[str, object]]:
+    """Range bias, range scale and bearing offset of each sensor that does not state its noise."""
+    extras = outcome.system.extras
+    rows: list[dict[str, object]] = []
+    if extras is None or not len(extras.sensors):
+        return rows
+    key = extras.key0 + np.arange(len(extras.sensors))
+    value = extras.values(outcome.state.extra, key, len(SENSOR_PARAMETERS))
+    covariance = outcome.quality.inverse.diagonal(key)
+    for s, (robot, sensor) in enumerate(extras.sensors):
+        for i, parameter in enumerate(SENSOR_PARAMETERS):
+            sigma = float(np.sqrt(covariance[s, i, i]))
+            rows.append(
+                {
+                    "robot": outcome.problem.robots[robot],
+                    "sensor": sensor,
+                    "parameter": parameter,
+                    "value": float(value[s, i]),
+                    "sigma": sigma,
+                    "significant": abs(value[s, i]) > SIGNIFICANT * sigma,
+                    "observable": sigma < OBSERVABLE * SENSOR_PRIOR[i],
+                    "used": True,
+                }
+            )
+    return rows
+
+
+def holdout_table(outcome: Outcome) -> pd.DataFrame:
+    """holdout.csv: how well what one robot saw of a landmark is predicted by the others."""
+    rows = [
+        {
+            "fold_kind": fold.kind,
+            "fold": fold.name,
+            "n": fold.n,
+            "n_effective": fold.n_effective,
+            "normalized_square": fold.normalized_square,
+            "lower": fold.lower,
+            "upper": fold.upper,
+        }
+        for fold in outcome.holdout.folds
+    ]
+    return complete("holdout", outcome.problem.dimension, pd.DataFrame(rows))

@@ -134,6 +134,12 @@ def _holdout_lines(reference: Reference, width: int) -> list[str]:
     if reference.holdout["normalized_square"].isna().all():
         return wrap("No hold-out test was made.", width)
     lines: list[str] = []
+    found = reference.meta["evidence"].get("holdout") or {}
+    if found.get("sigma_factor", 1.0) > 1.0:
+        lines += wrap(
+            f"Hold-out: the sigmas above are {found['sigma_factor']:.2f} times the noise model's.",
+            width,
+        )
     for kind, folds in reference.holdout.groupby("fold_kind", sort=False):
         folds = folds[folds["normalized_square"].notna()]
         n = folds["n"].to_numpy(dtype=np.float64)

@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 
 from jointmap.settings import Settings
+from jointmap.solve.shared import SENSOR_PRIOR
 from jointmap.trust.outcome import Outcome
 
 #: Shares beyond which a reference is called weak or inconsistent (design choices, no source).
@@ -172,11 +173,30 @@ def _distrust(
     if len(weak):
         out.append(f"{len(weak)} landmarks that are only weakly checked")
     out += list(outcome.problem.notes) + list(outcome.start.notes) + list(outcome.notes)
-    out.append(
-        "the stated sigmas assume errors that are independent from one sighting to the next; "
-        "errors shared by a burst make the reference less sure than it says"
-    )
+    if outcome.holdout.factor > 1.0:
+        out.insert(
+            0,
+            "left-out sightings deviate more than the noise model of single rows explains; all "
+            f"claimed sigmas are {outcome.holdout.factor:.2f} times what the model alone says",
+        )
+    elif outcome.holdout.whole is None:
+        out.append(
+            "no landmark ties two robots, so nothing tests the claimed sigmas from outside the model"
+        )
+    if any(abs(v) > 0 for v in _range_scales(outcome)):
+        out.append(
+            "the scale of the map rests on the sensors' ranges being right on average within "
+            f"{SENSOR_PRIOR[1]:.0%} each; a scale error common to all of them does not show"
+        )
     return tuple(out)
+
+
+def _range_scales(outcome: Outcome) -> list[float]:
+    extras = outcome.system.extras
+    if extras is None or not len(extras.sensors):
+        return []
+    key = extras.key0 + np.arange(len(extras.sensors))
+    return [float(v) for v in extras.values(outcome.state.extra, key, 3)[:, 1]]
 
 
 def _links(outcome: Outcome) -> list[Mapping[str, Any]]:

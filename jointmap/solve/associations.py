@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 from scipy.stats import chi2
+from scipy.stats import f as f_distribution
 
 from jointmap.graph.problem import Tracks
 
@@ -26,10 +27,18 @@ Bools = NDArray[np.bool_]
 #: Joint covariance (n, 2 dim, 2 dim) of the positions of pairs of landmark variables.
 JointCovariance = Callable[[Ints, Ints], Floats]
 
-#: Quantile of the accepted statistics from which their common scale is read; below the median, so
-#: that wrong associations that slipped in do not stretch it.
-_SCALE_QUANTILE = 0.3
+#: Quantiles of the accepted statistics from which their common scale is read: a low one finds what
+#: is far out whatever slipped in, the upper one then reads the spread of the rest, tails included.
+_FIRST_QUANTILE, _SCALE_QUANTILE = 0.3, 0.75
+#: Statistics beyond this many times the first scale's expectation are no part of the rest.
+_FAR_OUT = 25.0
 _SCALE_LEAST = 8
+#: Up to this scale the noise model explains the associations; beyond, their statistics are taken to
+#: have the tails of Student's distribution with so many degrees of freedom (common practice).
+_WELL_MODELLED, _STUDENT_DOF = 1.5, 6.0
+#: A rejected track returns only when it agrees better than this share of the limit, so that one on
+#: the edge does not come and go.
+_RETURN_SHARE = 0.5
 #: An alternative must agree at least this well, and the claim at least this much worse.
 ALTERNATIVE_GATE = 0.99
 
@@ -85,12 +94,12 @@ def review(tracks: Tracks, accepted: Bools, evidence: Evidence, gate: float) -> 
     """
     n = len(tracks.robot)
     dim = evidence.positions.shape[1]
-    limit = float(chi2.ppf(gate, dim))
     scale = _common_scale(evidence, dim)
+    limit = _limit(gate, dim, scale)
     statistic = np.full(n, np.nan)
     tested = evidence.dof >= dim
     # Tags are tested in position and orientation: brought to the scale of a position's gate.
-    fair = limit / chi2.ppf(gate, np.maximum(evidence.dof, 1.0))
+    fair = chi2.ppf(gate, dim) / chi2.ppf(gate, np.maximum(evidence.dof, 1.0))
     statistic[evidence.linked[tested]] = (evidence.statistic * fair)[tested] / scale
     out = accepted.copy()
     out[_worst(tracks, statistic, accepted, limit)] = False
@@ -125,16 +134,29 @@ def review(tracks: Tracks, accepted: Bools, evidence: Evidence, gate: float) -> 
     return Review(out, statistic, alternative, unresolved, scale, bool((out != accepted).any()))
 
 
+def _limit(gate: float, dim: int, scale: float) -> float:
+    """Limit of a scaled statistic: chi-square, or Student's where the model misses something.
+
+    Errors that the noise model does not know are not equally large for every landmark; a scale read
+    from all of them is then the middle of a spread of variances (Lange, Little & Taylor 1989).
+    """
+    if scale <= _WELL_MODELLED:
+        return float(chi2.ppf(gate, dim))
+    return float(dim * f_distribution.ppf(gate, dim, _STUDENT_DOF))
+
+
 def _common_scale(evidence: Evidence, dim: int) -> float:
     """Variance factor of the accepted associations, at least 1.
 
-    Bursts share errors that a white model does not know; the statistic of right associations is
-    then too large by a common factor, which their own distribution shows.
+    Bursts share errors that a noise model of rows does not know; the statistic of right
+    associations is then too large by a common factor, which their own distribution shows.
     """
     t = evidence.statistic[evidence.dof >= dim]
     if len(t) < _SCALE_LEAST:
         return 1.0
-    return max(1.0, float(np.quantile(t, _SCALE_QUANTILE) / chi2.ppf(_SCALE_QUANTILE, dim)))
+    first = max(1.0, float(np.quantile(t, _FIRST_QUANTILE) / chi2.ppf(_FIRST_QUANTILE, dim)))
+    rest = t[t < _FAR_OUT * first * dim]
+    return max(first, float(np.quantile(rest, _SCALE_QUANTILE) / chi2.ppf(_SCALE_QUANTILE, dim)))
 
 
 def _worst(tracks: Tracks, statistic: Floats, accepted: Bools, limit: float) -> Ints:
@@ -221,7 +243,7 @@ def _readmit(
     d2 = distance(evidence, evidence.own[there], tracks.claim[there], scale)
     finite = np.isfinite(d2)
     statistic[there[finite]] = d2[finite]
-    out[there[d2 < limit]] = True
+    out[there[d2 < _RETURN_SHARE * limit]] = True
 
 
 def _settle(

@@ -6,7 +6,7 @@ their index, then the calibration vectors of robots. Keys are therefore 0 .. n-1
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,7 +23,8 @@ class Layout:
 
     ``key_of_landmark`` (L,) is -1 for landmarks without a used sighting; ``landmark_of_key`` is its
     inverse for keys K .. K + A - 1. ``dims`` (n,) tangent dimensions, ``offset`` (n + 1,) their
-    cumulative sum. ``calibration_key`` (R,) is -1 for robots without a calibration vector.
+    cumulative sum. ``calibration_key`` (R,) is -1 for robots without a calibration vector;
+    ``sensor_key`` the variables of sensors' constant errors.
     """
 
     n_keyframes: int
@@ -32,6 +33,7 @@ class Layout:
     calibration_key: Ints
     dims: Ints
     offset: Ints
+    sensor_key: Ints = field(default_factory=lambda: np.zeros(0, dtype=np.int64))
 
     @property
     def n(self) -> int:

@@ -56,7 +56,7 @@ class LinearGraph:
     graph: gtsam.GaussianFactorGraph = field(default_factory=gtsam.GaussianFactorGraph)
 
     def push(self, rows: Rows) -> None:
-        """Add rows with one, two or three variables each."""
+        """Add rows with one to four variables each."""
         make, add, unit = gtsam.JacobianFactor, self.graph.push_back, _UNIT[rows.rhs.shape[1]]
         columns: list[Iterable[object]] = []
         for key, jacobian in zip(rows.keys, rows.jacobians, strict=True):
@@ -68,6 +68,11 @@ class LinearGraph:
         elif len(rows.keys) == 2:
             for k1, a1, k2, a2, b in zip(*columns, rhs, strict=True):
                 add(make(k1, a1, k2, a2, b, unit))
+        elif len(rows.keys) == 4:
+            # JacobianFactor takes three variables from Python; a conditional is one that takes any.
+            whole = gtsam.GaussianConditional
+            for k1, a1, k2, a2, k3, a3, k4, a4, b in zip(*columns, rhs, strict=True):
+                add(whole([(k1, a1), (k2, a2), (k3, a3), (k4, a4)], 1, b, unit))
         else:
             for k1, a1, k2, a2, k3, a3, b in zip(*columns, rhs, strict=True):
                 add(make(k1, a1, k2, a2, k3, a3, b, unit))
@@ -88,7 +93,7 @@ def system_order(system: HasLayout, graph: LinearGraph) -> gtsam.Ordering:
     if len(alone):
         # METIS reads beyond its arrays where a variable has no neighbour.
         graph = _with_neighbours(graph, system.layout.dims, alone)
-    return order(graph, keys[keys >= 0])
+    return order(graph, np.concatenate([keys[keys >= 0], system.layout.sensor_key]))
 
 
 def _with_neighbours(graph: LinearGraph, dims: Ints, alone: Ints) -> LinearGraph:

@@ -14,11 +14,22 @@ from numpy.typing import NDArray
 
 from jointmap import frames
 from jointmap.graph.calibrate import Calibration
-from jointmap.graph.noise import Noise, block_covariance, whitening
+from jointmap.graph.models import linearise_block
+from jointmap.graph.noise import (
+    BURSTY,
+    Noise,
+    block_covariance,
+    row_range,
+    shared_model,
+    stated_rows,
+    whitening,
+)
 from jointmap.graph.problem import Assignment, Block, Problem, State
 from jointmap.solve.decisions import Decisions
+from jointmap.solve.disputed import with_disputes
 from jointmap.solve.kernels import Kernel, RobustLoss
 from jointmap.solve.layout import n_landmarks
+from jointmap.solve.shared import LEAST_SHARE, SharedModel
 from jointmap.solve.system import System, make_system, part_rows
 
 Floats = NDArray[np.float64]
@@ -69,9 +80,90 @@ def first_state(
     return State(poses, landmarks, orientations if has_pose else None)
 
 
-def whiten_blocks(problem: Problem, noise: Noise) -> tuple[Floats, ...]:
-    """Whitening of every block under the noise in force."""
-    return tuple(whitening(block_covariance(b, problem, noise)) for b in problem.blocks)
+def whiten_blocks(
+    problem: Problem, noise: Noise, shared: Mapping[int, SharedModel] | None = None
+) -> tuple[Floats, ...]:
+    """Whitening of every block under the noise in force.
+
+    ``shared``: blocks whose shared errors are variables and do not weaken the rows.
+    """
+    shared = shared or {}
+    apart = {at for at, model in shared.items() if model.sigma is not None}
+    return tuple(
+        whitening(block_covariance(b, problem, noise, shared=at not in apart))
+        for at, b in enumerate(problem.blocks)
+    )
+
+
+#: Shared errors below this share of the white variance are nothing.
+LEAST_SHARED = 1e-3
+
+
+def shared_models(
+    problem: Problem, noise: Noise, *, constant: bool
+) -> tuple[dict[int, SharedModel], tuple[tuple[int, str], ...]]:
+    """What the rows of each block share, and the sensors that may have constant errors.
+
+    ``constant``: whether sensors whose noise is not stated get range bias, range scale and bearing
+    offset as variables.
+    """
+    models: dict[int, SharedModel] = {}
+    sensors: list[tuple[int, str]] = []
+    for at, block in enumerate(problem.blocks):
+        if block.kind not in BURSTY:
+            continue
+        robot = problem.robots[block.robot]
+        key = (block.robot, block.sensor)
+        open_noise = any(
+            t.free for t in noise.terms.values() if t.robot == robot and t.sensor == block.sensor
+        )
+        index = -1
+        if constant and open_noise and block.components != ("pose",):
+            if key not in sensors:
+                sensors.append(key)
+            index = sensors.index(key)
+        found, sigma = shared_model(block, problem, noise), None
+        time = np.zeros(block.sigma.shape[1])
+        if found is not None:
+            white = np.einsum("nii->ni", block_covariance(block, problem, noise, shared=False))
+            variance = found[0] ** 2 + found[1] ** 2 * row_range(block)[:, None] ** 2
+            variance = np.where(stated_rows(block), 0.0, variance)
+            if block.n and (variance.mean(axis=0) > LEAST_SHARED * white.mean(axis=0)).any():
+                sigma, time = np.sqrt(np.maximum(variance, LEAST_SHARE**2 * white)), found[2]
+        if sigma is not None or index >= 0:
+            models[at] = SharedModel(sigma, time, index)
+    return models, tuple(sensors)
+
+
+#: Ranges that scale noise are never taken to be shorter than this (m).
+LEAST_RANGE_M = 0.05
+
+
+def with_distances(problem: Problem, state: State) -> Problem:
+    """The problem with the range of every row as the state has it (see :func:`row_range`)."""
+    oriented = np.zeros(n_landmarks(problem), dtype=bool)
+    landmark = own_landmarks(problem).landmark
+    oriented[landmark] = problem.tracks.oriented
+    blocks = list(problem.blocks)
+    for at, block in enumerate(blocks):
+        if block.kind not in BURSTY or "range_m" not in block.components:
+            continue
+        lin = linearise_block(
+            frames.group(problem.dimension),
+            block,
+            state.poses,
+            state.landmarks,
+            state.orientations,
+            landmark,
+            oriented,
+            jacobians=False,
+        )
+        i = block.components.index("range_m")
+        observed = block.obs[:, i]
+        predicted = observed + lin.residual[:, i]
+        distance = np.where(np.isfinite(predicted), predicted, observed)
+        blocks[at] = replace(block, distance=np.maximum(distance, LEAST_RANGE_M))
+    return replace(problem, blocks=tuple(blocks))
 
 
 def linked_tracks(problem: Problem, decisions: Decisions, determined: Bools) -> Ints:
@@ -98,10 +190,17 @@ def system_of(
     kernel: RobustLoss | None,
     sensitivity: Mapping[int, Floats],
     calibration: Calibration,
+    shared: Mapping[int, SharedModel] | None = None,
+    sensors: tuple[tuple[int, str], ...] = (),
 ) -> System:
-    """The system of the present decisions; with a kernel all usable rows are in."""
+    """The system of the present decisions; with a kernel all usable rows are in.
+
+    ``shared``, ``sensors``: from :func:`shared_models`, where shared errors are variables.
+    """
     used = decisions.usable if kernel is not None else decisions.used
     kernels = tuple(_kernel(kernel, b) for b in problem.blocks)
+    if kernel is not None:
+        kernels = with_disputes(problem, whiten, used, kernel, kernels)
     weighted = whiten
     if kernel is None:
         weighted = tuple(
@@ -118,8 +217,11 @@ def system_of(
         sensitivity,
         calibration.offset,
         calibration.prior,
+        calibration.value[:, 0],
         linked_tracks(problem, decisions, present),
         LINK_SIGMA,
+        shared,
+        sensors,
     )
 
 

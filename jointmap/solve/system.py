@@ -35,6 +35,20 @@ from jointmap.solve.layout import (
     oriented_tracks,
 )
 from jointmap.solve.linear import LinearGraph, Rows
+from jointmap.solve.shared import (
+    SENSOR_PARAMETERS,
+    Chain,
+    Extras,
+    SharedModel,
+    by_state,
+    chain_rows,
+    constant_columns,
+    make_chain,
+    only,
+    scaled,
+    sensor_index,
+    sensor_rows,
+)
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -65,6 +79,8 @@ class Part:
 
     ``at`` is the place of the block in the problem, ``index`` (n,) the rows in it; ``whiten``
     (n, m, m); ``key_a``, ``key_b`` (n,) variables; ``landmark`` (n,) of sightings and control.
+    ``chain`` the errors that its rows share, which then are variables and no part of ``whiten``;
+    ``sensor_key`` the constant errors of its sensor where there is no chain to carry them (-1).
     """
 
     at: int
@@ -75,6 +91,8 @@ class Part:
     key_a: Ints
     key_b: Ints
     landmark: Ints | None
+    chain: Chain | None = None
+    sensor_key: int = -1
 
 
 @dataclass(frozen=True)
@@ -105,6 +123,8 @@ class System:
     sensitivity: Mapping[int, Floats] = field(default_factory=dict)
     calibration_offset: Floats = field(default_factory=lambda: np.zeros((0, 3)))
     calibration_prior: Floats = field(default_factory=lambda: np.ones((0, 3)))
+    scale: Floats = field(default_factory=lambda: np.ones(0))
+    extras: Extras | None = None
 
 
 def make_system(
@@ -116,8 +136,11 @@ def make_system(
     sensitivity: Mapping[int, Floats] | None = None,
     calibration_offset: Floats | None = None,
     calibration_prior: Floats | None = None,
+    scale: Floats | None = None,
     links: Ints | None = None,
     link_sigma: float = 1e-3,
+    shared: Mapping[int, SharedModel] | None = None,
+    sensors: tuple[tuple[int, str], ...] = (),
 ) -> System:
     """Assemble a system.
 
@@ -130,7 +153,10 @@ def make_system(
         translation scale, turn scale and lag; robots in it get a calibration vector
     calibration_offset, calibration_prior : (R, 3) present calibration minus its prior mean, and
         the prior's standard deviations
+    scale : (R,) translation scale with which the odometry was integrated
     links : (k,) tracks whose own landmark is tied to the shared one that they claim
+    shared : block -> what its rows share; their ``whiten`` is then of the white part alone
+    sensors : (robot index, name) of every sensor with constant errors, by ``SharedModel.sensor``
     """
     links = np.zeros(0, dtype=np.int64) if links is None else links
     sensitivity = sensitivity or {}
@@ -153,6 +179,7 @@ def make_system(
     pairs = [(p.key_a, p.key_b) for p in parts if p.block.kind not in ("fix", "gravity", "control")]
     pairs.append((layout.key_of_landmark[tied.own], layout.key_of_landmark[tied.shared]))
     n_tied = layout.n - int(calibrated.sum())
+    parts, layout, extras = _with_extras(problem, parts, layout, shared or {}, sensors)
     return System(
         problem,
         assignment,
@@ -164,7 +191,49 @@ def make_system(
         sensitivity,
         np.zeros((len(problem.robots), 3)) if calibration_offset is None else calibration_offset,
         np.ones((len(problem.robots), 3)) if calibration_prior is None else calibration_prior,
+        np.ones(len(problem.robots)) if scale is None else scale,
+        extras,
     )
+
+
+def _with_extras(
+    problem: Problem,
+    parts: list[Part],
+    layout: Layout,
+    shared: Mapping[int, SharedModel],
+    sensors: tuple[tuple[int, str], ...],
+) -> tuple[list[Part], Layout, Extras | None]:
+    """Parts with the variables of their shared and constant errors, which follow all others."""
+    if not shared:
+        return parts, layout, None
+    key0, n_sensors = layout.n, sensor_index(shared)
+    dims = [np.full(n_sensors, len(SENSOR_PARAMETERS), dtype=np.int64)]
+    key, out = key0 + n_sensors, []
+    for part in parts:
+        model = shared.get(part.at)
+        if model is None:
+            out.append(part)
+            continue
+        sensor_key = key0 + model.sensor if model.sensor >= 0 else -1
+        if model.sigma is None:
+            out.append(replace(part, sensor_key=sensor_key))
+            continue
+        target = part.landmark
+        if target is None:
+            target = problem.keyframes.robot[part.block.b]
+        mine = replace(model, sigma=model.sigma[part.index])
+        chain = make_chain(part.block, target, mine, key, sensor_key)
+        dims.append(np.full(len(chain.key), part.whiten.shape[1], dtype=np.int64))
+        key += len(chain.key)
+        out.append(replace(part, chain=chain))
+    size = np.concatenate(dims)
+    extras = Extras(
+        sensors[:n_sensors], key0, size, np.concatenate([[0], np.cumsum(size)]).astype(np.int64)
+    )
+    whole = np.concatenate([layout.dims, size])
+    offset = np.concatenate([[0], np.cumsum(whole)]).astype(np.int64)
+    last = key0 + np.arange(n_sensors)
+    return out, replace(layout, dims=whole, offset=offset, sensor_key=last), extras
 
 
 def _uniform(keep: Bools, landmark: Ints | None, oriented: Bools) -> list[Ints]:
@@ -192,8 +261,13 @@ def _part(
     return Part(at, sub, index, whiten, kernel, sub.a, key_b, landmark)
 
 
-def linearise(system: System, part: Part, state: State, *, jacobians: bool = True) -> Linearised:
-    """Unwhitened residual and Jacobians of a part at a state, calibration step included."""
+def linearise(
+    system: System, part: Part, state: State, *, jacobians: bool = True, total: bool = False
+) -> Linearised:
+    """Unwhitened residual and Jacobians of a part at a state, calibration step included.
+
+    ``total``: the whole error of each row, the share of its chain not taken off.
+    """
     lin = linearise_block(
         frames.group(system.problem.dimension),
         part.block,
@@ -205,11 +279,85 @@ def linearise(system: System, part: Part, state: State, *, jacobians: bool = Tru
         jacobians=jacobians,
     )
     if part.block.kind == "odometry" and part.block.robot in system.sensitivity:
-        shift = system.sensitivity[part.block.robot][part.index] @ calibration_step(
-            system, state, part.block.robot
-        )
-        lin = replace(lin, residual=lin.residual - shift)
-    return lin
+        change = calibration_step(system, state, part.block.robot)
+        shift = system.sensitivity[part.block.robot][part.index] @ change
+        factor = _row_units(system, part.block.robot, change[0])
+        lin = replace(lin, residual=(lin.residual - shift) * factor)
+        if lin.jac_a is not None and change[0] != 0.0:
+            assert lin.jac_b is not None
+            turn = factor[:, None]
+            lin = replace(lin, jac_a=lin.jac_a * turn, jac_b=lin.jac_b * turn)
+    if total or system.extras is None or (part.chain is None and part.sensor_key < 0):
+        return lin
+    error = shared_error(system, part, state, lin.residual)
+    stretch = 1.0 + sensor_constant(system, part, state)[1] * scaled(part.block.components)
+    return replace(
+        lin,
+        residual=lin.residual + error,
+        jac_a=None if lin.jac_a is None else lin.jac_a * stretch[:, None],
+        jac_b=None if lin.jac_b is None else lin.jac_b * stretch[:, None],
+    )
+
+
+def shared_error(system: System, part: Part, state: State, residual: Floats) -> Floats:
+    """Shared and constant error (n, m) of a part's rows at a state.
+
+    ``residual`` (n, m) predicted minus observed. The range scale acts on each row's own range; bias
+    and bearing offset are in the mean of the chain, where there is one.
+    """
+    assert system.extras is not None
+    constant, columns = sensor_constant(system, part, state), row_columns(part, residual)
+    if part.chain is None:
+        return np.asarray(columns @ constant)
+    values = system.extras.values(state.extra, part.chain.key, part.whiten.shape[1])
+    return np.asarray(values[part.chain.state] + columns[:, :, 1] * constant[1])
+
+
+def sensor_constant(system: System, part: Part, state: State) -> Floats:
+    """Constant errors (3,) of a part's sensor: range bias, range scale, bearing offset."""
+    key = part.sensor_key if part.chain is None else part.chain.sensor_key
+    if system.extras is None or key < 0:
+        return np.zeros(len(SENSOR_PARAMETERS))
+    return system.extras.values(state.extra, key, len(SENSOR_PARAMETERS))
+
+
+def row_columns(part: Part, residual: Floats) -> Floats:
+    """Derivative (n, m, 3) of the rows' error by the constant errors of their sensor."""
+    if part.block.components == ("pose",):
+        return constant_columns(part.block.components, residual)
+    return constant_columns(part.block.components, part.block.obs + residual)
+
+
+def state_columns(system: System, part: Part, state: State) -> Floats:
+    """The same (E, m, 3), on average over the rows of each state of the part's chain."""
+    assert part.chain is not None
+    lin = linearise(system, part, state, jacobians=False, total=True)
+    return by_state(part.chain, row_columns(part, lin.residual))
+
+
+def extra_rows(system: System, state: State) -> list[Rows]:
+    """Whitened rows that tie the shared and constant errors of sensors among themselves."""
+    if system.extras is None:
+        return []
+    out = sensor_rows(system.extras, state.extra)
+    for part in system.parts:
+        if part.chain is not None:
+            columns = state_columns(system, part, state)
+            out += chain_rows(system.extras, part.chain, state.extra, columns)
+    return out
+
+
+def _row_units(system: System, robot: int, change: float) -> Floats:
+    """Factor (dof,) that takes an odometry residual from metres to the units of its rows.
+
+    The noise of an odometry belongs to what the odometry reports. In metres of the map a smaller
+    scale would make every residual smaller, and the world would shrink to hide the noise.
+    """
+    dim = system.problem.dimension
+    out = np.ones(3 if dim == 2 else 6)
+    place = slice(0, 2) if dim == 2 else slice(3, 6)
+    out[place] = 1.0 / max(1.0 + change / system.scale[robot], 0.1)
+    return out
 
 
 def calibration_step(system: System, state: State, robot: int) -> Floats:
@@ -243,6 +391,8 @@ def cost(system: System, state: State) -> float:
     for robot in system.sensitivity:
         v = _prior_residual(system, state, robot)
         total += 0.5 * float(v @ v)
+    for rows in extra_rows(system, state):
+        total += 0.5 * float(np.einsum("nm,nm->", rows.rhs, rows.rhs))
     return total
 
 
@@ -340,9 +490,31 @@ def part_rows(
     if part.block.kind == "odometry" and part.block.robot in system.sensitivity:
         key = system.layout.calibration_key[part.block.robot]
         keys.append(np.full(len(part.index), key))
-        jacobians.append(-(w @ system.sensitivity[part.block.robot][part.index]))
+        jacobians.append(-(w @ _odometry_columns(system, part, state, lin.residual)))
+    if part.chain is not None:
+        keys.append(part.chain.key[part.chain.state])
+        jacobians.append(w)
+        if part.chain.sensor_key >= 0 and scaled(part.block.components).any():
+            keys.append(np.full(len(part.index), part.chain.sensor_key))
+            bare = linearise(system, part, state, jacobians=False, total=True).residual
+            jacobians.append(w @ only(row_columns(part, bare), [1]))
+    elif part.sensor_key >= 0:
+        keys.append(np.full(len(part.index), part.sensor_key))
+        bare = linearise(system, part, state, jacobians=False, total=True).residual
+        jacobians.append(w @ row_columns(part, bare))
     rhs = -residual if weight is None else -residual * np.sqrt(weight)[:, None]
     return Rows(keys, jacobians, rhs), residual
+
+
+def _odometry_columns(system: System, part: Part, state: State, residual: Floats) -> Floats:
+    """Minus the derivative (n, dof, 3) of odometry residuals by the calibration of their robot."""
+    robot = part.block.robot
+    change = calibration_step(system, state, robot)[0]
+    factor = _row_units(system, robot, change)
+    out = system.sensitivity[robot][part.index] * factor[:, None]
+    place = slice(0, 2) if system.problem.dimension == 2 else slice(3, 6)
+    out[:, place, 0] += residual[:, place] / (system.scale[robot] + change)
+    return out
 
 
 def linearise_system(system: System, state: State) -> LinearisedSystem:
@@ -372,6 +544,9 @@ def linearise_system(system: System, state: State) -> LinearisedSystem:
         total += 0.5 * float(v @ v)
         key = np.array([system.layout.calibration_key[robot]])
         graph.push(Rows([key], [np.diag(1.0 / system.calibration_prior[robot])[None]], -v[None]))
+    for rows in extra_rows(system, state):
+        graph.push(rows)
+        total += 0.5 * float(np.einsum("nm,nm->", rows.rhs, rows.rhs))
     k = system.layout.n_keyframes
     gauge = make_gauge(system.problem, state.poses[:k], system.component, absolute)
     for hold in gauge.rows:
@@ -427,4 +602,8 @@ def retract(system: System, state: State, delta: Floats) -> State:
         name = system.problem.robots[robot]
         for i, p in enumerate(ODOMETRY_PARAMETERS):
             calibration[(name, "", p)] = calibration.get((name, "", p), 0.0) + float(delta[at + i])
-    return State(poses, landmarks, orientations, calibration)
+    extra = state.extra
+    if system.extras is not None:
+        step = delta[layout.offset[system.extras.key0] :]
+        extra = step if extra is None or len(extra) != len(step) else extra + step
+    return State(poses, landmarks, orientations, calibration, extra)

@@ -6,7 +6,7 @@ white part alone, ``E (v_i - m_b)^2 = (1 - 1/n) s_i^2``, and the means show the 
 burst's mean (h the mean share of its rows that the other measurements predict). Both moments are
 weighted by the score of their variance, as restricted maximum likelihood weighs them, and every
 term is multiplied by the ratio of its two sides. Gross errors are kept out by gates, and what the
-gates cut from good values is put back (CHECKS D4).
+gates cut from good values is put back.
 """
 
 from __future__ import annotations
@@ -24,8 +24,8 @@ from jointmap.graph.noise import (
     Noise,
     NoiseTerm,
     TermKey,
-    observed_range,
     residual_names,
+    row_range,
     with_value,
 )
 from jointmap.graph.problem import Problem
@@ -95,7 +95,7 @@ def _component(
     named = [noise.terms.get((robot, sensor, name, t)) for t in (*_WHITE, *_SHARED)]
     if not free.any() or not any(t is not None and t.free for t in named):
         return
-    distance2 = observed_range(block)[free] ** 2
+    distance2 = row_range(block)[free] ** 2
     shapes = {"constant": np.ones(len(distance2)), "per_m": distance2}
     shapes |= {"correlated": shapes["constant"], "correlated_per_m": distance2}
     terms = {

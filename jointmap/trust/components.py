@@ -62,6 +62,17 @@ def update_noise(
     return solved(sums, noise)
 
 
+def update_motion_noise(
+    problem: Problem, noise: Noise, system: System, quality: Quality
+) -> tuple[Noise, float]:
+    """One update of every free term that is not of sightings: odometry, fixes, closures."""
+    sums: dict[TermKey, Sides] = {}
+    for part, stats in zip(system.parts, quality.parts, strict=True):
+        if part.block.kind not in BURSTY:
+            _add(sums, problem, noise, part, stats)
+    return solved(sums, noise)
+
+
 def _scaled_by_median(problem: Problem, noise: Noise, system: System, quality: Quality) -> Noise:
     ratios: dict[tuple[str, str, str, str], list[tuple[float, int]]] = {}
     terms: dict[tuple[str, str, str, str], NoiseTerm] = {}

@@ -17,6 +17,7 @@ from jointmap.solve.decisions import Decisions
 from jointmap.solve.optimise import Optimised
 from jointmap.solve.session import own_landmarks
 from jointmap.solve.system import System
+from jointmap.trust.holdout import HoldOut
 from jointmap.trust.quality import Quality
 
 Floats = NDArray[np.float64]
@@ -40,6 +41,7 @@ class Outcome:
     optimised: Optimised
     settled: bool
     notes: tuple[str, ...]
+    holdout: HoldOut
 
 
 def association_evidence(

@@ -13,10 +13,21 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from jointmap.graph.noise import whitening
 from jointmap.graph.problem import State
 from jointmap.solve.gauge import Gauge
-from jointmap.solve.linear import Ordering, eliminate, system_order
-from jointmap.solve.system import System, linearise_system, link_rows, part_rows
+from jointmap.solve.linear import Ordering, Rows, eliminate, system_order
+from jointmap.solve.system import (
+    Part,
+    System,
+    extra_rows,
+    linearise,
+    linearise_system,
+    link_rows,
+    part_rows,
+    row_columns,
+    sensor_constant,
+)
 from jointmap.trust.elimination import clique_tree
 from jointmap.trust.marginals import SelectedInverse, selected_inverse_of
 from jointmap.trust.redundancy import UNCHECKED, redundancy_matrices
@@ -25,12 +36,20 @@ from jointmap.trust.solve_pairs import SquareRootFactor
 Floats = NDArray[np.float64]
 
 
+#: Redundancy of a link below which nothing tests it: what it ties would be metres apart unnoticed.
+LEAST_LINK = 1e-9
+
+
 @dataclass(frozen=True)
 class PartQuality:
-    """Per measurement of a part: whitened residual (n, m), redundancy matrix (n, m, m)."""
+    """Per measurement of a part: whitened residual (n, m), redundancy matrix (n, m, m).
+
+    A direction whose redundancy is below ``least`` is not tested.
+    """
 
     whitened: Floats
     redundancy: Floats
+    least: float = UNCHECKED
 
     @property
     def numbers(self) -> Floats:
@@ -40,7 +59,7 @@ class PartQuality:
     def statistic(self) -> tuple[Floats, Floats]:
         """Test statistic T (n,) and its degrees of freedom (n,), 0 where nothing checks."""
         values, vectors = np.linalg.eigh(self.redundancy)
-        checked = values > UNCHECKED
+        checked = values > self.least
         along = np.einsum("nji,nj->ni", vectors, self.whitened)
         t = np.where(checked, along**2 / np.where(checked, values, 1.0), 0.0).sum(axis=1)
         return t, checked.sum(axis=1).astype(np.float64)
@@ -48,13 +67,21 @@ class PartQuality:
 
 @dataclass(frozen=True)
 class Quality:
-    """Covariances at the inlier set and the quality of every used measurement and link."""
+    """Covariances at the inlier set and the quality of every used measurement and link.
+
+    ``parts`` judge the whole error of a row. Where that is a white part and one that rows share,
+    ``white`` judges the white part alone (None elsewhere). ``chi2`` and ``rows`` are the sum and the
+    number of the whitened residuals of everything that entered: rows, links, priors and chains.
+    """
 
     gauge: Gauge
     inverse: SelectedInverse
     factor: SquareRootFactor
     parts: tuple[PartQuality, ...]
     links: PartQuality | None
+    white: tuple[PartQuality | None, ...] = ()
+    chi2: float = 0.0
+    rows: int = 0
 
 
 def assess(system: System, state: State, ordering: Ordering | None = None) -> Quality:
@@ -65,22 +92,69 @@ def assess(system: System, state: State, ordering: Ordering | None = None) -> Qu
     lin = linearise_system(system, state)
     ordering = system_order(system, lin.graph) if ordering is None else ordering
     tree = clique_tree(eliminate(lin.graph, ordering), system.layout.dims)
-    inverse = selected_inverse_of(tree)
-    parts = []
+    inverse, factor = selected_inverse_of(tree), SquareRootFactor(tree)
+    parts, white, count = [], [], 0
     for part in system.parts:
         rows, residual = part_rows(system, part, state)
-        parts.append(PartQuality(residual, redundancy_matrices(rows.keys, rows.jacobians, inverse)))
-    links = _link_quality(system, state, inverse) if len(system.links.track) else None
-    return Quality(lin.gauge, inverse, SquareRootFactor(tree), tuple(parts), links)
+        mine = PartQuality(residual, redundancy_matrices(rows.keys, rows.jacobians, inverse))
+        count += residual.size
+        white.append(None if part.chain is None else mine)
+        parts.append(mine if part.chain is None else _whole(system, part, state, rows, inverse))
+    links = None
+    if len(system.links.track):
+        links = _link_quality(system, state, factor)
+        count += sum(r.rhs.size for _, r in link_rows(system, state, jacobians=False))
+    count += sum(r.rhs.size for r in extra_rows(system, state))
+    count += 3 * len(system.sensitivity) + int(lin.gauge.free.sum())
+    return Quality(
+        lin.gauge,
+        inverse,
+        factor,
+        tuple(parts),
+        links,
+        tuple(white),
+        2.0 * lin.cost,
+        count,
+    )
 
 
-def _link_quality(system: System, state: State, inverse: SelectedInverse) -> PartQuality:
-    """Quality of the links; those tied by position have rows of zeros in place of rotation."""
+def _whole(
+    system: System, part: Part, state: State, rows: Rows, inverse: SelectedInverse
+) -> PartQuality:
+    """Quality of the whole error of rows that share a part of it.
+
+    Generalised least squares leaves ``Cov(v) = S - A Sigma A^T`` also where S is correlated between
+    rows; its diagonal blocks need no more than each row's own variance.
+    """
+    chain = part.chain
+    assert chain is not None
+    back = np.linalg.inv(part.whiten)
+    covariance = back @ np.swapaxes(back, 1, 2)
+    index = np.arange(covariance.shape[1])
+    covariance[:, index, index] += chain.sigma[chain.state] ** 2
+    w = whitening(np.asarray(covariance, dtype=np.float64))
+    residual = linearise(system, part, state, jacobians=False, total=True).residual
+    residual = residual + row_columns(part, residual) @ sensor_constant(system, part, state)
+    turn = w @ back
+    geometry = [turn @ j for j in rows.jacobians[:2]]
+    return PartQuality(
+        np.einsum("nij,nj->ni", w, residual),
+        redundancy_matrices(rows.keys[:2], geometry, inverse),
+    )
+
+
+def _link_quality(system: System, state: State, factor: SquareRootFactor) -> PartQuality:
+    """Quality of the links; those tied by position have rows of zeros in place of rotation.
+
+    A link is far tighter than what it ties is known, so its redundancy is tiny, and yet exact.
+    """
     groups = link_rows(system, state)
     n, m = len(system.links.track), max(rows.rhs.shape[1] for _, rows in groups)
     whitened, redundancy = np.zeros((n, m)), np.zeros((n, m, m))
     for index, rows in groups:
         size = rows.rhs.shape[1]
         whitened[index, :size] = -rows.rhs
-        redundancy[index, :size, :size] = redundancy_matrices(rows.keys, rows.jacobians, inverse)
-    return PartQuality(whitened, redundancy)
+        (first, second), (jac_i, jac_j) = rows.keys, rows.jacobians
+        predicted = factor.row_covariance(first, second, jac_i, jac_j)
+        redundancy[index, :size, :size] = np.eye(size) - predicted
+    return PartQuality(whitened, redundancy, LEAST_LINK)

@@ -109,3 +109,52 @@ def joint_blocks(  # type: ignore[no-untyped-def]
         for i in range(d):
             for j in range(e):
                 out[q, d + j, i] = out[q, i, d + j]
+
+
+@numba.njit(cache=True)
+def row_products(  # type: ignore[no-untyped-def]
+    panel, start, rows, column_start, columns, parent, offset, clique_of, i_keys, j_keys,
+    jac_i, jac_j, out,
+):  # fmt: skip
+    """``J Sigma J'`` (q, m, m) of rows ``J = [J_i J_j]`` on pairs of keys.
+
+    The rows are combined before anything is squared: the variance of a difference of two almost
+    equal variables keeps its digits.
+    """
+    n = offset[-1]
+    m, d, e = jac_i.shape[1], jac_i.shape[2], jac_j.shape[2]
+    left, right = np.zeros((n, d)), np.zeros((n, e))
+    touched_left, touched_right = np.empty(n, np.int64), np.empty(n, np.int64)
+    on_left = np.zeros(n, np.bool_)
+    y = np.empty(m)
+    for q in range(len(i_keys)):
+        a, b = i_keys[q], j_keys[q]
+        count = _unit_columns(
+            panel, start, rows, column_start, columns, parent,
+            clique_of[a], offset[a], d, left, touched_left,
+        )  # fmt: skip
+        other = _unit_columns(
+            panel, start, rows, column_start, columns, parent,
+            clique_of[b], offset[b], e, right, touched_right,
+        )  # fmt: skip
+        out[q] = 0.0
+        for t in range(count):
+            on_left[touched_left[t]] = True
+        for t in range(count + other):
+            row = touched_left[t] if t < count else touched_right[t - count]
+            if t >= count and on_left[row]:
+                continue
+            for i in range(m):
+                y[i] = 0.0
+                for k in range(d):
+                    y[i] += jac_i[q, i, k] * left[row, k]
+                for k in range(e):
+                    y[i] += jac_j[q, i, k] * right[row, k]
+            for i in range(m):
+                for j in range(m):
+                    out[q, i, j] += y[i] * y[j]
+        for t in range(count):
+            left[touched_left[t]] = 0.0
+            on_left[touched_left[t]] = False
+        for t in range(other):
+            right[touched_right[t]] = 0.0
