@@ -12,6 +12,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from pathlib import Path
 
+import pandas as pd
 import pytest
 import wheel_graphs as wheel
 
@@ -31,26 +32,30 @@ SETTINGS = Settings(
 )
 
 
-def _fused(graph: wheel.Graph, pieces: int, folder: Path, seed: int = 0) -> tuple[float, Reference]:
+def _fused(
+    graph: wheel.Graph, pieces: int, folder: Path, seed: int = 0, *, coin: bool = False
+) -> tuple[float, Reference]:
     """Chi-square of the fused answer in the unsplit graph of gtsam, and the reference.
 
     The optimum of that graph, found by gtsam from the fused answer, must not be lower.
     """
-    made = wheel.cut(graph, pieces, folder / "survey", seed=seed)
+    made = wheel.cut(graph, pieces, folder / "survey", seed=seed, coin=coin)
     reference = jointmap.fuse(jointmap.read_survey(made.folder), SETTINGS)
-    assert reference.status == "ok", reference.meta["reasons"]
+    assert reference.status in ("ok", "weak") if coin else reference.status == "ok"
     assert [len(c) for c in reference.meta["components"]] == [pieces]
     values = wheel.fused_values(graph, made, reference)
     chi2 = 2.0 * wheel.factor_graph(graph).error(values)
     best, _ = wheel.optimum(graph, values)
     assert chi2 == pytest.approx(best, rel=RELATIVE)
     assert reference.meta["chi2"] == pytest.approx(best, rel=RELATIVE)
-    assert reference.meta["dof"] == wheel.degrees_of_freedom(graph)
+    # A jump of the odometry stays in with a weight that no longer pulls: three rows more.
+    jumps = int((_rejected(reference)["kind"] == "odometry").sum())
+    assert reference.meta["dof"] == wheel.degrees_of_freedom(graph) + 3 * jumps
     return chi2, reference
 
 
-def _rejected(reference: Reference) -> int:
-    return int((reference.measurements["verdict"] == "rejected").sum())
+def _rejected(reference: Reference) -> pd.DataFrame:
+    return reference.measurements[reference.measurements["verdict"] == "rejected"]
 
 
 @pytest.mark.parametrize("pieces", [4, pytest.param(5, marks=pytest.mark.study)])
@@ -59,16 +64,41 @@ def test_city(pieces: int, tmp_path: Path) -> None:
     chi2, reference = _fused(wheel.read_city(), pieces, tmp_path)
     assert chi2 == pytest.approx(31931.54, rel=RELATIVE)
     assert reference.meta["dof"] == 32064
-    assert _rejected(reference) == 200
-    rows = reference.measurements
-    assert set(rows.loc[rows["verdict"] == "rejected", "kind"]) == {"closure"}
+    assert len(_rejected(reference)) == 200
+    assert set(_rejected(reference)["kind"]) == {"closure"}
+
+
+@pytest.mark.parametrize(
+    ("poses", "pieces"),
+    [
+        (2000, 4),
+        pytest.param(None, 4, marks=pytest.mark.study),
+        pytest.param(None, 5, marks=pytest.mark.study),
+    ],
+)
+def test_city_where_the_odometry_may_be_the_wrong_candidate(
+    poses: int | None, pieces: int, tmp_path: Path
+) -> None:
+    """A coin says which candidate is the odometry and which a closure: loops elsewhere decide.
+
+    Every wrong step is called a jump of the odometry and every wrong closure rejected.
+    """
+    graph = wheel.read_city(poses)
+    assert graph.wrong is not None
+    chi2, reference = _fused(graph, pieces, tmp_path, coin=True)
+    if poses is None:
+        assert chi2 == pytest.approx(31931.54, rel=RELATIVE)
+    out = _rejected(reference)
+    assert len(out) == len(graph.wrong.pose)
+    assert (out["kind"] == "odometry").sum() > 0.3 * len(out)
+    assert out.loc[out["kind"] == "odometry", "reason"].str.startswith("jump").all()
 
 
 def test_sphere(tmp_path: Path) -> None:
     chi2, reference = _fused(wheel.read_sphere(), 4, tmp_path)
     assert chi2 == pytest.approx(14806.856, rel=RELATIVE)
     assert reference.meta["dof"] == 14700
-    assert _rejected(reference) == 0
+    assert not len(_rejected(reference))
 
 
 @pytest.mark.parametrize(
@@ -90,7 +120,7 @@ class TestCutInTwoInTime:
         graph = wheel.inflated(wheel.read_landmark_graph(name), factor)
         chi2, reference = _fused(graph, 2, tmp_path)
         assert factor * chi2 == pytest.approx(expected, rel=RELATIVE)
-        assert _rejected(reference) == 0
+        assert not len(_rejected(reference))
 
     def test_by_landmarks_alone(
         self, name: str, factor: float, expected: float, tmp_path: Path
@@ -99,7 +129,7 @@ class TestCutInTwoInTime:
         chi2, reference = _fused(wheel.without_bridges(whole, 2), 2, tmp_path)
         # Without the step between them three rows are gone, and what they cost.
         assert factor * chi2 < expected
-        assert _rejected(reference) == 0
+        assert not len(_rejected(reference))
         assert not (reference.measurements["kind"] == "closure").any()
 
 

@@ -22,6 +22,7 @@ from jointmap.graph.noise import Noise
 from jointmap.graph.problem import Problem
 from jointmap.graph.start import features as collect
 from jointmap.graph.start.align import form_of
+from jointmap.graph.start.disputed import with_alternatives
 from jointmap.graph.start.doubt import feature_covariance
 from jointmap.graph.start.gather import Material, assumed_noise, gather
 from jointmap.graph.start.joint import Joined, join_teams
@@ -113,7 +114,8 @@ def initial_state(problem: Problem, noise: Noise | None = None, seed: int = 0) -
     seed : int
         Of the random samples that cross-check links.
     """
-    material = gather(problem, assumed_noise(problem) if noise is None else noise)
+    noise = assumed_noise(problem) if noise is None else noise
+    material = with_alternatives(problem, noise, gather(problem, noise))
     solo = solve_alone(problem, material)
     teams = grow(_link_material(problem, material, solo), _apart(problem, solo), seed)
     joined = join_teams(problem, material, solo, teams)
