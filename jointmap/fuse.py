@@ -23,6 +23,7 @@ from jointmap.graph.calibrate import (
     odometry_sensitivity,
     reintegrate,
 )
+from jointmap.graph.disputes import any_between_neighbours
 from jointmap.graph.noise import Noise, block_covariance, initial_noise, whitening
 from jointmap.graph.problem import Problem, State
 from jointmap.graph.start import StartResult, initial_state
@@ -339,6 +340,8 @@ def _robust(run: _Run) -> None:
 
 def _settle_disputes(run: _Run) -> None:
     """Let the rest of the survey choose between odometry steps and closures that contradict them."""
+    if not any_between_neighbours(run.problem):
+        return
     system = _system(run, robust=True, undecided=True)
     if any(isinstance(part.kernel, Mixed) for part in system.parts):
         _absorb(run, _optimise(run, system, 1e-4))

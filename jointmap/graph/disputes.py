@@ -38,6 +38,11 @@ class Disputes:
     closure_row: Ints
 
 
+def any_between_neighbours(problem: Problem) -> bool:
+    """Whether any closure ties two neighbouring keyframes, so that there may be a dispute."""
+    return any(b.kind == "closure" and bool((np.abs(b.b - b.a) == 1).any()) for b in problem.blocks)
+
+
 def disputed_steps(problem: Problem, covariances: Sequence[Floats]) -> Disputes:
     """Find the steps that a closure contradicts.
 

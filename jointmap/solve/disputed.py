@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from jointmap.graph.disputes import Disputes, disputed_steps
+from jointmap.graph.disputes import Disputes, any_between_neighbours, disputed_steps
 from jointmap.graph.problem import Problem
 from jointmap.solve.kernels import RobustLoss
 
@@ -92,7 +92,7 @@ def with_disputes(
     """Kernels of all blocks, with ``kernel`` for steps in dispute; while it is undecided, neither
     the steps nor the closures against them pull.
     """
-    if not any(b.kind == "closure" and b.n for b in problem.blocks):
+    if not any_between_neighbours(problem):
         return kernels
     disputes = disputes_of(problem, whiten)
     undecided = isinstance(kernel, Undecided)

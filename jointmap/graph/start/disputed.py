@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap import frames
-from jointmap.graph.disputes import disputed_steps
+from jointmap.graph.disputes import any_between_neighbours, disputed_steps
 from jointmap.graph.noise import Noise, block_covariance
 from jointmap.graph.problem import Problem
 from jointmap.graph.start.chunks import HEADING_LIMIT
@@ -23,6 +23,8 @@ def with_alternatives(problem: Problem, noise: Noise, material: Material) -> Mat
     The step itself becomes as uncertain as the two statements are apart, and enough for a chunk to
     end there: within a chunk nothing could put a wrong step right.
     """
+    if not any_between_neighbours(problem):
+        return material
     empty = np.zeros((0, 0, 0))
     kinds = ("odometry", "closure")
     covariances = [
