@@ -79,6 +79,8 @@ STRAY_GATE = 1.0 - 1e-6
 RETURNING = ("closure", "encounter", "fix")
 #: Share of rows whose verdict may still flip when the final solve stands.
 EDGE_SHARE = 2e-4
+#: Metres or radians by which the final solve may still want to move when it stops.
+REST = 1e-5
 #: The same where noise is estimated along, which keeps the gates moving a little.
 EDGE_SHARE_CHAINED = 2e-3
 
@@ -288,22 +290,32 @@ def _robust_loss(settings: Settings) -> RobustLoss | None:
     return Kernel(settings.kernel, settings.kernel_constant)
 
 
-def _optimise(run: _Run, system: System, relative: float) -> Optimised:
+def _optimise(run: _Run, system: System, relative: float, rest: float = 0.0) -> Optimised:
     counter = [0]
 
     def report(text: str) -> None:
         counter[0] += 1
         run.progress.update(counter[0], text)
 
-    settings = OptimiseSettings(iterations=run.settings.max_iterations, relative=relative)
-    return optimise(system, run.state, settings, _ordering(run, system), report)
+    settings = OptimiseSettings(run.settings.max_iterations, relative, rest=rest)
+    key = _variables(system)
+    known = run.ordering[1] if run.ordering is not None and run.ordering[0] == key else None
+    done = optimise(system, run.state, settings, known, report)
+    run.ordering = (key, done.ordering)
+    return done
+
+
+def _variables(system: System) -> bytes:
+    """What tells one set of variables from another."""
+    layout = system.layout
+    key = layout.landmark_of_key.tobytes() + layout.calibration_key.tobytes()
+    key += b"" if system.extras is None else system.extras.dims.tobytes()
+    return key
 
 
 def _ordering(run: _Run, system: System) -> Ordering:
     """Elimination ordering of a system, made once for each set of variables."""
-    layout = system.layout
-    key = layout.landmark_of_key.tobytes() + layout.calibration_key.tobytes()
-    key += b"" if system.extras is None else system.extras.dims.tobytes()
+    key = _variables(system)
     if run.ordering is None or run.ordering[0] != key:
         graph = linearise_system(system, run.state).graph
         run.ordering = (key, system_order(system, graph))
@@ -462,10 +474,12 @@ def _final(run: _Run) -> tuple[System, Optimised, Quality]:
         run.chained = True
     for number in range(run.settings.max_rounds):
         system = _system(run, robust=False)
-        done = _optimise(run, system, COARSE if run.chained else FINE)
+        done = _optimise(run, system, COARSE if run.chained else FINE, REST)
+        problem = run.problem
         step = _absorb(run, done)
+        last = done.last if run.problem is problem else None
         system = _system(run, robust=False)
-        quality = assess(system, run.state, _ordering(run, system))
+        quality = assess(system, run.state, _ordering(run, system), last)
         changed = _review_rows(run, system, quality)
         changed |= _review(run, system, quality)
         noise, change = run.noise, 1.0
@@ -476,7 +490,7 @@ def _final(run: _Run) -> tuple[System, Optimised, Quality]:
         if run.settled or number == run.settings.max_rounds - 1:
             break
         run.noise = noise
-    return system, replace(done, state=run.state), quality
+    return system, replace(done, state=run.state, last=None), quality
 
 
 def _stray_rows(run: _Run, system: System, quality: Quality) -> list[Bools]:

@@ -22,6 +22,8 @@ Ints = NDArray[np.int64]
 
 #: GTSAM's elimination ordering, for rooms that only pass it on.
 Ordering = gtsam.Ordering
+#: An eliminated system, likewise.
+BayesTree = gtsam.GaussianBayesTree
 _UNIT = {m: gtsam.noiseModel.Unit.Create(m) for m in range(1, 13)}
 
 

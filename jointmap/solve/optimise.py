@@ -1,9 +1,9 @@
 """Robust Gauss-Newton with Levenberg-Marquardt damping where a step fails.
 
 Iteratively reweighted least squares (Holland & Welsch 1977): at each state the kernel's weights
-enter the linear system; GTSAM eliminates it. What a step moves as a whole is applied exactly
-(:mod:`jointmap.solve.rigid`). A step that raises the robust objective is repeated
-with Marquardt's diagonal damping (Marquardt 1963).
+enter the linear system; GTSAM eliminates it. Where a step raises the robust objective and is
+mostly a motion of the whole, that motion is applied exactly (:mod:`jointmap.solve.rigid`); if it
+still does, it is repeated with Marquardt's diagonal damping (Marquardt 1963).
 """
 
 from __future__ import annotations
@@ -25,23 +25,37 @@ Ints = NDArray[np.int64]
 
 Report = Callable[[str], None]
 
+#: A step is mostly a motion of the whole when what remains of it is below this share.
+MOSTLY_COMMON = 0.25
+#: A step whose coordinates are this share of their standard deviations (rms) changes nothing.
+REST_SIGMA = 1e-4
+
 
 @dataclass(frozen=True)
 class OptimiseSettings:
     """When to stop: relative decrease of the objective below ``relative`` in two steps running,
     or no step of a variable above ``step`` (metres, radians); at most ``iterations``.
+
+    ``rest``: also stop where an undamped step would move nothing by more than this (metres,
+    radians), nor by more than REST_SIGMA standard deviations (root mean square over the unknowns).
+    That step is left out, so that its elimination is exactly that of the result; 0: go on.
     """
 
     iterations: int = 50
     relative: float = 1e-7
     step: float = 1e-7
+    rest: float = 0.0
     first_damping: float = 1e-5
     last_damping: float = 1e8
 
 
 @dataclass(frozen=True)
 class Optimised:
-    """Outcome: the best state, its objective, how it went, and the ordering for further use."""
+    """Outcome: the best state, its objective, how it went, and the ordering for further use.
+
+    ``last`` holds the linearisation at the state and its elimination, where ``rest`` ended the
+    solve.
+    """
 
     state: State
     cost: float
@@ -49,6 +63,7 @@ class Optimised:
     converged: bool
     ordering: gtsam.Ordering
     start_cost: float
+    last: tuple[LinearisedSystem, gtsam.GaussianBayesTree] | None = None
 
 
 def optimise(
@@ -68,7 +83,7 @@ def optimise(
     settings = settings or OptimiseSettings()
     state, damping, small = start, 0.0, 0
     first = now = np.inf
-    converged = False
+    converged, last = False, None
     iteration = 0
     for iteration in range(1, settings.iterations + 1):
         lin = linearise_system(system, state)
@@ -76,12 +91,17 @@ def optimise(
         first = now if iteration == 1 else first
         if ordering is None:
             ordering = system_order(system, lin.graph)
-        moved, new, damping, size = _descend(system, state, lin, ordering, damping, settings)
+        damped = damping
+        moved, new, damping, size, tree = _descend(system, state, lin, ordering, damping, settings)
         if report is not None:
             report(f"iteration {iteration}: objective {min(new, now):.6g}")
         if moved is None:
             # No damping helps any more: a stationary point up to rounding, or a failure.
             converged = size < 1e3 * settings.step or now < 1e-12
+            break
+        plain = damped == damping == 0.0
+        if tree is not None and plain and _negligible(now - new, size, settings.rest, system):
+            converged, last = True, (lin, tree)
             break
         state = moved
         small = small + 1 if now - new <= settings.relative * (now + 1e-12) else 0
@@ -90,7 +110,15 @@ def optimise(
             converged = True
             break
     assert ordering is not None
-    return Optimised(state, now, iteration, converged, ordering, first)
+    return Optimised(state, now, iteration, converged, ordering, first, last)
+
+
+def _negligible(gain: float, size: float, rest: float, system: System) -> bool:
+    """Whether a step of this gain in the objective and largest move is not worth taking.
+
+    Half the squared length of a Gauss-Newton step in standard deviations is its gain.
+    """
+    return size < rest and gain < 0.5 * REST_SIGMA**2 * float(system.layout.offset[-1])
 
 
 def _descend(
@@ -100,8 +128,11 @@ def _descend(
     ordering: gtsam.Ordering,
     damping: float,
     settings: OptimiseSettings,
-) -> tuple[State | None, float, float, float]:
-    """One accepted step: new state, its objective, the damping to go on with, largest move."""
+) -> tuple[State | None, float, float, float, gtsam.GaussianBayesTree | None]:
+    """One accepted step: new state, its objective, the damping to go on with, largest move.
+
+    Last the elimination that gave the step.
+    """
     graph, now = lin.graph, lin.cost
     diagonal: Floats | None = None
     size = np.inf
@@ -114,7 +145,8 @@ def _descend(
             used.graph.push_back(graph.graph)
             used.damp(system.layout.dims, np.sqrt(damping * diagonal))
         try:
-            delta = step(eliminate(used, ordering))
+            tree = eliminate(used, ordering)
+            delta = step(tree)
             ok = bool(np.isfinite(delta).all())
         except Exception:
             if damping >= 1e-2:
@@ -122,16 +154,22 @@ def _descend(
             ok = False
         if ok:
             motion = common_motion(system, lin.gauge, state, delta)
-            delta = without(system, state, delta, motion)
-            size = float(np.abs(delta).max(initial=0.0))
-            moved = move(system, retract(system, state, delta), motion)
-            new = cost(system, moved)
-            if new <= now * (1 + 1e-12) + 1e-12:
-                smaller = damping * 0.1
-                return moved, new, 0.0 if smaller < settings.first_damping else smaller, size
+            rest = without(system, state, delta, motion)
+            size = float(np.abs(rest).max(initial=0.0))
+            whole = float(np.abs(delta).max(initial=0.0))
+            for exact in (False, True) if size < MOSTLY_COMMON * whole else (False,):
+                if exact:
+                    moved = move(system, retract(system, state, rest), motion)
+                else:
+                    moved = retract(system, state, delta)
+                new = cost(system, moved)
+                if new <= now * (1 + 1e-12) + 1e-12:
+                    smaller = damping * 0.1
+                    left = 0.0 if smaller < settings.first_damping else smaller
+                    return moved, new, left, size, tree
         damping = max(damping * 10.0, settings.first_damping)
         if damping > settings.last_damping or size < 1e-12:
-            return None, now, damping, size
+            return None, now, damping, size, None
 
 
 def hessian_diagonal(graph: LinearGraph, n: int) -> Floats:

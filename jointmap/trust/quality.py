@@ -16,8 +16,9 @@ from numpy.typing import NDArray
 from jointmap.graph.noise import whitening
 from jointmap.graph.problem import State
 from jointmap.solve.gauge import Gauge
-from jointmap.solve.linear import Ordering, Rows, eliminate, system_order
+from jointmap.solve.linear import BayesTree, Ordering, Rows, eliminate, system_order
 from jointmap.solve.system import (
+    LinearisedSystem,
     Part,
     System,
     extra_rows,
@@ -84,14 +85,23 @@ class Quality:
     rows: int = 0
 
 
-def assess(system: System, state: State, ordering: Ordering | None = None) -> Quality:
+def assess(
+    system: System,
+    state: State,
+    ordering: Ordering | None = None,
+    last: tuple[LinearisedSystem, BayesTree] | None = None,
+) -> Quality:
     """Covariances and redundancies of a system at a state, at full weight of its rows.
 
-    The kernels of the system must be None: a kernel's curvature is not a covariance.
+    The kernels of the system must be None: a kernel's curvature is not a covariance. ``last`` is
+    the linearisation at this very state and its elimination, if a solve has just made them.
     """
-    lin = linearise_system(system, state)
-    ordering = system_order(system, lin.graph) if ordering is None else ordering
-    tree = clique_tree(eliminate(lin.graph, ordering), system.layout.dims)
+    if last is None:
+        lin = linearise_system(system, state)
+        ordering = system_order(system, lin.graph) if ordering is None else ordering
+        last = lin, eliminate(lin.graph, ordering)
+    lin = last[0]
+    tree = clique_tree(last[1], system.layout.dims)
     inverse, factor = selected_inverse_of(tree), SquareRootFactor(tree)
     parts, white, count = [], [], 0
     for part in system.parts:
