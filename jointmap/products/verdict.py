@@ -18,8 +18,10 @@ UNCHECKED_SHARE = 0.5
 REJECTED_MEASUREMENTS = 0.2
 REJECTED_ASSOCIATIONS = 0.5
 REJECTED_CONTROL = 0.3
-#: Median statistic over its law beyond which stated sigmas are called wrong.
+#: Residuals over their sigmas (median of a block, or all together) beyond which these are called
+#: wrong, and the degrees of freedom that all together need.
 STATED_FACTOR = 4.0
+LEAST_DOF = 20
 
 
 @dataclass(frozen=True)
@@ -63,6 +65,15 @@ def judge(
                 "inconsistent",
                 f"residuals of {name} are {factor:.1f} times what its stated sigmas allow; "
                 "remove them from survey.toml to have them estimated",
+            )
+        )
+    whole = _whole(outcome)
+    if whole > STATED_FACTOR:
+        reasons.append(
+            (
+                "inconsistent",
+                f"all residuals together are {whole:.1f} times what the sigmas allow: they are too "
+                "small, or wrong measurements were kept",
             )
         )
     for link in outcome.start.links:
@@ -148,6 +159,13 @@ def _stated(outcome: Outcome) -> dict[str, float]:
             what = f"{name}'s {block.kind}s" + (f" by {block.sensor}" if block.sensor else "")
             out[what] = max(out.get(what, 0.0), factor)
     return out
+
+
+def _whole(outcome: Outcome) -> float:
+    """Root of chi-square over degrees of freedom, 0 with too few to tell."""
+    quality = outcome.quality
+    dof = quality.rows - int(outcome.system.layout.dims.sum())
+    return float(np.sqrt(quality.chi2 / dof)) if dof >= LEAST_DOF else 0.0
 
 
 def _distrust(

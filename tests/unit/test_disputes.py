@@ -2,18 +2,24 @@
 
 from __future__ import annotations
 
+import importlib
 from pathlib import Path
 
 import numpy as np
 import pandas as pd
 import pytest
+from numpy.typing import NDArray
 from tiny_survey import World, pose_columns, write_survey
 
 import jointmap
 from jointmap.graph.build import BuildSettings, build_problem
 from jointmap.graph.disputes import disputed_steps
 from jointmap.graph.noise import block_covariance, initial_noise
+from jointmap.graph.problem import Block
+from jointmap.settings import Settings
 from jointmap.trust.deleted import deleted_statistic
+
+Floats = NDArray[np.float64]
 
 SIGMA = 0.01
 
@@ -94,3 +100,31 @@ def test_directions_that_the_others_do_not_predict_test_nothing() -> None:
     statistic, dof = deleted_statistic(np.array([[1e3, 3.0]]), hat, np.zeros(1))
     assert dof[0] == 1
     assert statistic[0] == pytest.approx(9.0 / 1.5)
+
+
+def test_residuals_far_beyond_their_sigmas_are_never_called_ok(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Wrong closures, too few for a verdict on their own, behind a gate that lets all rows pass."""
+    world = World(2, robots=("heron",), duration_s=60.0)
+    rng = np.random.default_rng(8)
+    spans = [(k, k + 100) for k in range(5, 185, 6)]
+    off = 50.0 * SIGMA * rng.choice([-1.0, 1.0], len(spans))
+    folder = write_survey(
+        tmp_path,
+        2,
+        {"heron": {"odometry": world.odometry("heron")}},
+        wide={"closures": _closures(world, spans, list(off))},
+    )
+    survey, settings = jointmap.read_survey(folder), Settings(noise="given", calibrate=False)
+
+    def gate(
+        block: Block, statistic: Floats, dof: Floats, gate: float, scale: float | None = None
+    ) -> tuple[NDArray[np.bool_], Floats]:
+        return np.ones(len(statistic), dtype=bool), np.ones(len(statistic))
+
+    monkeypatch.setattr(importlib.import_module("jointmap.fuse"), "gate_rows", gate)
+    reference = jointmap.fuse(survey, settings)
+    assert (reference.measurements["verdict"] == "kept").all()
+    assert reference.status == "inconsistent"
+    assert "times what the sigmas allow" in reference.meta["reasons"][0]
