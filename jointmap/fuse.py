@@ -64,9 +64,9 @@ Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
 #: Noise has settled when no well-determined sigma changes by more than this factor in a round.
-SETTLED = 1.05
+SETTLED = 1.1
 #: The same for the first rounds, whose noise the final solve refines.
-SETTLED_ROUGHLY = 1.15
+SETTLED_ROUGHLY = 1.2
 #: Step of the odometry calibration, in prior sigmas, below which it stands still; the second where
 #: noise is estimated along.
 CALIBRATED, CALIBRATED_CHAINED = 1e-3, 0.02
@@ -82,7 +82,7 @@ EDGE_SHARE = 2e-4
 #: Metres or radians by which the final solve may still want to move when it stops.
 REST = 1e-5
 #: The same where noise is estimated along, which keeps the gates moving a little.
-EDGE_SHARE_CHAINED = 2e-3
+EDGE_SHARE_CHAINED = 4e-3
 
 
 @dataclass
@@ -104,6 +104,7 @@ class _Run:
     chained: bool = False
     settled: bool = True
     stray: list[Bools] | None = None
+    back: list[Bools] | None = None
     returned: list[Bools] | None = None
     notes: list[str] = field(default_factory=list)
 
@@ -530,16 +531,27 @@ def _review_rows(run: _Run, system: System, quality: Quality) -> bool:
             dof = np.full(len(norm2), float(part.whiten.shape[1]))
             scale = scales.get(part.at, 1.0)
             keep, _ = gate_rows(part.block, norm2, dof, gate, scale)
+            keep &= _first_return(run, part, keep)
             keep |= _returning(run, system, quality, outside, part, ~keep, scale)
             used[part.at][part.index] = keep
     used = [rows & ~out for rows, out in zip(used, stray, strict=True)]
     changed = sum(int((a != b).sum()) for a, b in zip(before, used, strict=True))
     lifted = _lift_odometry(run, system, quality)
     # A handful of rows on the very edge of the gate is not worth another solve.
-    if not lifted and changed <= EDGE_SHARE * sum(rows.sum() for rows in before):
+    edge = EDGE_SHARE_CHAINED if run.chained else EDGE_SHARE
+    if not lifted and changed <= edge * sum(rows.sum() for rows in before):
         return False
     run.decisions = replace(run.decisions, used=tuple(used))
     return True
+
+
+def _first_return(run: _Run, part: Part, rows: Bools) -> Bools:
+    """Rows (n,) that have not come back before: one on the edge of the gate must not come and go."""
+    if run.back is None:
+        run.back = [np.zeros(b.n, dtype=bool) for b in run.problem.blocks]
+    fresh: Bools = np.asarray(~run.back[part.at][part.index])
+    run.back[part.at][part.index[rows & fresh]] = True
+    return fresh
 
 
 def _returning(

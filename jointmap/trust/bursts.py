@@ -39,6 +39,9 @@ Ints = NDArray[np.int64]
 GATE = 0.99
 #: One update changes a sigma by at most this factor.
 LARGEST_STEP = 3.0
+#: Power of the ratio by which a sigma moves: plain ratios creep where several terms share the
+#: variance, and twice as far is still stable where one term makes it all.
+STRETCH = 1.5
 #: The mean of a burst keeps at least this share of its variance in the moment equation; below it
 #: the division would only amplify noise.
 LEAST_SHARE = 0.05
@@ -194,7 +197,7 @@ def moved(sides: Sides, default: float) -> tuple[NoiseTerm, float] | None:
     """
     if sides.support < LEAST_REDUNDANCY or sides.expected <= 0.0:
         return None
-    ratio = float(np.sqrt(max(sides.seen, 1e-12) / sides.expected))
+    ratio = float(np.sqrt(max(sides.seen, 1e-12) / sides.expected)) ** STRETCH
     ratio = float(np.clip(ratio, 1 / LARGEST_STEP, LARGEST_STEP))
     floor = FLOOR_SHARE * default
     value = max(sides.term.value * ratio, floor)
