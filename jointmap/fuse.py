@@ -53,6 +53,7 @@ from jointmap.solve.session import (
 from jointmap.solve.shared import SharedModel
 from jointmap.solve.system import Part, System, linearise, linearise_system, whitened_norm
 from jointmap.trust.components import update_motion_noise, update_noise
+from jointmap.trust.constants import Constants, judge_constants
 from jointmap.trust.correlation import split_by_correlation
 from jointmap.trust.deleted import fair_statistic
 from jointmap.trust.holdout import enlarged, hold_out
@@ -105,6 +106,7 @@ class _Run:
     settled: bool = True
     stray: list[Bools] | None = None
     back: list[Bools] | None = None
+    constants: Constants | None = None
     returned: list[Bools] | None = None
     notes: list[str] = field(default_factory=list)
 
@@ -162,6 +164,7 @@ def fuse(
         settled=run.settled,
         notes=tuple(run.notes),
         holdout=evidence,
+        constants=run.constants,
     )
     reference = assemble(outcome, settings, progress)
     progress.finish()
@@ -279,6 +282,7 @@ def _system(
         run.calibration,
         shared,
         sensors,
+        None if run.constants is None else run.constants.used,
     )
 
 
@@ -484,6 +488,8 @@ def _final(run: _Run) -> tuple[System, Optimised, Quality]:
         changed = _review_rows(run, system, quality)
         changed |= _review(run, system, quality)
         noise, change = run.noise, 1.0
+        if run.chained and number == 0:
+            changed |= _choose_constants(run, system, quality)
         if run.chained:
             noise, change = update_motion_noise(run.problem, run.noise, system, quality)
         still = CALIBRATED_CHAINED if run.chained else CALIBRATED
@@ -492,6 +498,12 @@ def _final(run: _Run) -> tuple[System, Optimised, Quality]:
             break
         run.noise = noise
     return system, replace(done, state=run.state, last=None), quality
+
+
+def _choose_constants(run: _Run, system: System, quality: Quality) -> bool:
+    """Keep the constant errors of sensors that the data speak for; says whether any is given up."""
+    run.constants = judge_constants(system, quality, run.state)
+    return run.constants is not None and not bool(run.constants.used.all())
 
 
 def _stray_rows(run: _Run, system: System, quality: Quality) -> list[Bools]:

@@ -262,19 +262,24 @@ def _sensor_rows(outcome: Outcome) -> list[dict[str, object]]:
     key = extras.key0 + np.arange(len(extras.sensors))
     value = extras.values(outcome.state.extra, key, len(SENSOR_PARAMETERS))
     covariance = outcome.quality.inverse.diagonal(key)
+    tested = outcome.constants
+    used = np.ones(len(SENSOR_PARAMETERS), dtype=bool) if tested is None else tested.used
     for s, (robot, sensor) in enumerate(extras.sensors):
         for i, parameter in enumerate(SENSOR_PARAMETERS):
-            sigma = float(np.sqrt(covariance[s, i, i]))
+            sigma, found = float(np.sqrt(covariance[s, i, i])), float(value[s, i])
+            if tested is not None and not used[i]:
+                # Held at zero: what it would have been, for the record.
+                sigma, found = float(tested.sigma[s, i]), float(tested.value[s, i])
             rows.append(
                 {
                     "robot": outcome.problem.robots[robot],
                     "sensor": sensor,
                     "parameter": parameter,
-                    "value": float(value[s, i]),
+                    "value": found,
                     "sigma": sigma,
-                    "significant": abs(value[s, i]) > SIGNIFICANT * sigma,
+                    "significant": bool(used[i] and abs(found) > SIGNIFICANT * sigma),
                     "observable": sigma < OBSERVABLE * SENSOR_PRIOR[i],
-                    "used": True,
+                    "used": bool(used[i]),
                 }
             )
     return rows

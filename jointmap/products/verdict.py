@@ -201,20 +201,14 @@ def _distrust(
         out.append(
             "no landmark ties two robots, so nothing tests the claimed sigmas from outside the model"
         )
-    if any(abs(v) > 0 for v in _range_scales(outcome)):
+    if outcome.system.extras is not None and len(outcome.system.extras.sensors):
+        used = outcome.constants is None or bool(outcome.constants.used[1])
+        limit = f" (taken to be within {SENSOR_PRIOR[1]:.0%} each)" if used else ""
         out.append(
-            "the scale of the map rests on the sensors' ranges being right on average within "
-            f"{SENSOR_PRIOR[1]:.0%} each; a scale error common to all of them does not show"
+            "the scale of the map rests on the sensors' ranges being right on average"
+            f"{limit}; a scale error common to all of them does not show"
         )
     return tuple(out)
-
-
-def _range_scales(outcome: Outcome) -> list[float]:
-    extras = outcome.system.extras
-    if extras is None or not len(extras.sensors):
-        return []
-    key = extras.key0 + np.arange(len(extras.sensors))
-    return [float(v) for v in extras.values(outcome.state.extra, key, 3)[:, 1]]
 
 
 def _links(outcome: Outcome) -> list[Mapping[str, Any]]:

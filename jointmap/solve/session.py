@@ -192,10 +192,12 @@ def system_of(
     calibration: Calibration,
     shared: Mapping[int, SharedModel] | None = None,
     sensors: tuple[tuple[int, str], ...] = (),
+    constants: Bools | None = None,
 ) -> System:
     """The system of the present decisions; with a kernel all usable rows are in.
 
-    ``shared``, ``sensors``: from :func:`shared_models`, where shared errors are variables.
+    ``shared``, ``sensors``: from :func:`shared_models`, where shared errors are variables;
+    ``constants`` (3,) the constant errors of sensors that are used (None: all).
     """
     used = decisions.usable if kernel is not None else decisions.used
     kernels = tuple(_kernel(kernel, b) for b in problem.blocks)
@@ -222,6 +224,7 @@ def system_of(
         LINK_SIGMA,
         shared,
         sensors,
+        constants,
     )
 
 

@@ -32,6 +32,8 @@ Bools = NDArray[np.bool_]
 #: practice: cameras and lasers that nobody calibrated; no source).
 SENSOR_PARAMETERS = ("range_bias_m", "range_scale", "bearing_offset_rad")
 SENSOR_PRIOR = np.array([0.05, 0.02, 0.02])
+#: Share of its prior to which a constant error is held that is not used.
+UNUSED_SHARE = 1e-4
 #: Rows of one target this close in time (s) share one state.
 STEP_S = 1.0
 #: A gap of this many correlation times ends a chain.
@@ -176,13 +178,14 @@ class Extras:
     """Variables beyond poses and landmarks: constant errors of sensors, then shared errors.
 
     ``sensors`` (robot index, name) of each constant error; ``key0`` the first key, ``dims`` (X,) and
-    ``offset`` (X + 1,) within the extra vector.
+    ``offset`` (X + 1,) within the extra vector; ``prior`` (3,) sigmas of the constant errors.
     """
 
     sensors: tuple[tuple[int, str], ...]
     key0: int
     dims: Ints
     offset: Ints
+    prior: Floats
 
     def values(self, extra: Floats | None, key: Ints | int, size: int) -> Floats:
         """Values (n, size) of extra variables by key; zero for a vector of another system."""
@@ -239,8 +242,8 @@ def sensor_rows(extras: Extras, extra: Floats | None) -> list[Rows]:
         return []
     key = extras.key0 + np.arange(n)
     value = extras.values(extra, key, len(SENSOR_PARAMETERS))
-    weight = np.broadcast_to(np.diag(1.0 / SENSOR_PRIOR), (n, 3, 3))
-    return [Rows([key], [weight], -value / SENSOR_PRIOR)]
+    weight = np.broadcast_to(np.diag(1.0 / extras.prior), (n, 3, 3))
+    return [Rows([key], [weight], -value / extras.prior)]
 
 
 def sensor_index(models: Mapping[int, SharedModel]) -> int:

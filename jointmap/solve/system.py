@@ -37,6 +37,8 @@ from jointmap.solve.layout import (
 from jointmap.solve.linear import LinearGraph, Rows
 from jointmap.solve.shared import (
     SENSOR_PARAMETERS,
+    SENSOR_PRIOR,
+    UNUSED_SHARE,
     Chain,
     Extras,
     SharedModel,
@@ -141,6 +143,7 @@ def make_system(
     link_sigma: float = 1e-3,
     shared: Mapping[int, SharedModel] | None = None,
     sensors: tuple[tuple[int, str], ...] = (),
+    constants: Bools | None = None,
 ) -> System:
     """Assemble a system.
 
@@ -157,6 +160,7 @@ def make_system(
     links : (k,) tracks whose own landmark is tied to the shared one that they claim
     shared : block -> what its rows share; their ``whiten`` is then of the white part alone
     sensors : (robot index, name) of every sensor with constant errors, by ``SharedModel.sensor``
+    constants : (3,) which of them may differ from zero; None: all
     """
     links = np.zeros(0, dtype=np.int64) if links is None else links
     sensitivity = sensitivity or {}
@@ -179,7 +183,7 @@ def make_system(
     pairs = [(p.key_a, p.key_b) for p in parts if p.block.kind not in ("fix", "gravity", "control")]
     pairs.append((layout.key_of_landmark[tied.own], layout.key_of_landmark[tied.shared]))
     n_tied = layout.n - int(calibrated.sum())
-    parts, layout, extras = _with_extras(problem, parts, layout, shared or {}, sensors)
+    parts, layout, extras = _with_extras(problem, parts, layout, shared or {}, sensors, constants)
     return System(
         problem,
         assignment,
@@ -202,6 +206,7 @@ def _with_extras(
     layout: Layout,
     shared: Mapping[int, SharedModel],
     sensors: tuple[tuple[int, str], ...],
+    constants: Bools | None,
 ) -> tuple[list[Part], Layout, Extras | None]:
     """Parts with the variables of their shared and constant errors, which follow all others."""
     if not shared:
@@ -227,9 +232,10 @@ def _with_extras(
         key += len(chain.key)
         out.append(replace(part, chain=chain))
     size = np.concatenate(dims)
-    extras = Extras(
-        sensors[:n_sensors], key0, size, np.concatenate([[0], np.cumsum(size)]).astype(np.int64)
-    )
+    offset = np.concatenate([[0], np.cumsum(size)]).astype(np.int64)
+    used = np.ones(len(SENSOR_PARAMETERS), dtype=bool) if constants is None else constants
+    prior = SENSOR_PRIOR * np.where(used, 1.0, UNUSED_SHARE)
+    extras = Extras(sensors[:n_sensors], key0, size, offset, prior)
     whole = np.concatenate([layout.dims, size])
     offset = np.concatenate([[0], np.cumsum(whole)]).astype(np.int64)
     last = key0 + np.arange(n_sensors)

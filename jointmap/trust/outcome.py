@@ -17,6 +17,7 @@ from jointmap.solve.decisions import Decisions
 from jointmap.solve.optimise import Optimised
 from jointmap.solve.session import own_landmarks
 from jointmap.solve.system import System
+from jointmap.trust.constants import Constants
 from jointmap.trust.holdout import HoldOut
 from jointmap.trust.quality import Quality
 
@@ -42,6 +43,7 @@ class Outcome:
     settled: bool
     notes: tuple[str, ...]
     holdout: HoldOut
+    constants: Constants | None = None
 
 
 def association_evidence(
