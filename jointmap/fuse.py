@@ -79,7 +79,7 @@ STRAY_GATE = 1.0 - 1e-6
 #: else places, its association decides.
 RETURNING = ("closure", "encounter", "fix")
 #: Share of rows whose verdict may still flip when the final solve stands.
-EDGE_SHARE = 2e-4
+EDGE_SHARE = 1e-3
 #: Metres or radians by which the final solve may still want to move when it stops.
 REST = 1e-5
 #: The same where noise is estimated along, which keeps the gates moving a little.

@@ -199,3 +199,87 @@ def share_clique(key_start, keys, clique_of, i_keys, j_keys):  # type: ignore[no
                 out[q] = True
                 break
     return out
+
+
+@numba.njit(cache=True)
+def _block_place(  # type: ignore[no-untyped-def]
+    start, column_start, key_start, keys, dims, clique_of, row_of, a, b
+):
+    """Where the covariance of a pair stands: offset, row stride, column stride; -1 for nowhere."""
+    flip = clique_of[b] > clique_of[a]
+    if flip:
+        a, b = b, a
+    c = clique_of[a]
+    w = column_start[c + 1] - column_start[c]
+    column = 0
+    for k in range(key_start[c], key_start[c + 1]):
+        if keys[k] == b:
+            base = start[c] + row_of[a] * w + column
+            return (base, 1, w) if flip else (base, w, 1)
+        column += dims[keys[k]]
+    return -1, 0, 0
+
+
+@numba.njit(cache=True)
+def row_covariance(  # type: ignore[no-untyped-def]
+    panel, cov, start, rows, column_start, key_start, keys, dims, clique_of, row_of, i_keys, j_keys,
+    jac_i, jac_j, out,
+):  # fmt: skip
+    """``J Sigma J'`` (q, m, m) of rows on pairs that share a clique; the first pair that does not.
+
+    The row is carried through the clique's own elimination before anything is squared, so that the
+    variance of a difference of two almost equal variables keeps its digits.
+    """
+    m = jac_i.shape[1]
+    for q in range(len(i_keys)):
+        a, b = i_keys[q], j_keys[q]
+        c = max(clique_of[a], clique_of[b])
+        f, first = rows[c], column_start[c]
+        w = column_start[c + 1] - first
+        row = np.zeros((m, w))
+        column, found = 0, 0
+        for k in range(key_start[c], key_start[c + 1]):
+            d = dims[keys[k]]
+            for i in range(m):
+                for j in range(d):
+                    if keys[k] == a:
+                        row[i, column + j] += jac_i[q, i, j]
+                    if keys[k] == b:
+                        row[i, column + j] += jac_j[q, i, j]
+            found += (keys[k] == a) + (keys[k] == b)
+            column += d
+        if found < 2:
+            return q
+        base = start[c]
+        for j in range(f):
+            scale = 1.0 / panel[base + j * w + j]
+            for i in range(m):
+                row[i, j] *= scale
+                for k in range(j + 1, w):
+                    row[i, k] -= row[i, j] * panel[base + j * w + k]
+        out[q] = 0.0
+        for i in range(m):
+            for j in range(m):
+                for k in range(f):
+                    out[q, i, j] += row[i, k] * row[j, k]
+        left = f
+        for k in range(key_start[c], key_start[c + 1]):
+            if clique_of[keys[k]] == c:
+                continue
+            right = f
+            for other in range(key_start[c], key_start[c + 1]):
+                if clique_of[keys[other]] == c:
+                    continue
+                place, down, along = _block_place(
+                    start, column_start, key_start, keys, dims, clique_of, row_of,
+                    keys[k], keys[other],
+                )  # fmt: skip
+                for x in range(dims[keys[k]]):
+                    for y in range(dims[keys[other]]):
+                        value = cov[place + x * down + y * along]
+                        for i in range(m):
+                            for j in range(m):
+                                out[q, i, j] += row[i, left + x] * value * row[j, right + y]
+                right += dims[keys[other]]
+            left += dims[keys[k]]
+    return -1

@@ -112,7 +112,7 @@ def assess(
         parts.append(mine if part.chain is None else _whole(system, part, state, rows, inverse))
     links = None
     if len(system.links.track):
-        links = _link_quality(system, state, factor)
+        links = _link_quality(system, state, inverse)
         count += sum(r.rhs.size for _, r in link_rows(system, state, jacobians=False))
     count += sum(r.rhs.size for r in extra_rows(system, state))
     count += 3 * len(system.sensitivity) + int(lin.gauge.free.sum())
@@ -153,7 +153,7 @@ def _whole(
     )
 
 
-def _link_quality(system: System, state: State, factor: SquareRootFactor) -> PartQuality:
+def _link_quality(system: System, state: State, inverse: SelectedInverse) -> PartQuality:
     """Quality of the links; those tied by position have rows of zeros in place of rotation.
 
     A link is far tighter than what it ties is known, so its redundancy is tiny, and yet exact.
@@ -165,6 +165,6 @@ def _link_quality(system: System, state: State, factor: SquareRootFactor) -> Par
         size = rows.rhs.shape[1]
         whitened[index, :size] = -rows.rhs
         (first, second), (jac_i, jac_j) = rows.keys, rows.jacobians
-        predicted = factor.row_covariance(first, second, jac_i, jac_j)
+        predicted = inverse.row_covariance(first, second, jac_i, jac_j)
         redundancy[index, :size, :size] = np.eye(size) - predicted
     return PartQuality(whitened, redundancy, LEAST_LINK)

@@ -89,29 +89,6 @@ class SquareRootFactor:
         result[order] = out
         return result
 
-    def row_covariance(
-        self, i_keys: ArrayLike, j_keys: ArrayLike, jac_i: Floats, jac_j: Floats
-    ) -> Floats:
-        """``J Sigma J'`` (n, r, r) of rows that tie two variables each.
-
-        Unlike a sum of joint blocks it keeps its digits where the variables are almost one.
-
-        Parameters
-        ----------
-        i_keys, j_keys : (n,) int, each side of one dimension d, e
-        jac_i, jac_j : (n, r, d), (n, r, e)
-        """
-        first, _ = self._checked(i_keys)
-        second, _ = self._checked(j_keys)
-        out = np.empty((len(first), jac_i.shape[1], jac_i.shape[1]))
-        tree = self.tree
-        solve_kernels.row_products(
-            tree.panel, tree.panel_start, tree.rows, tree.column_start, tree.columns, tree.parent,
-            tree.offset, tree.clique_of, first, second, np.ascontiguousarray(jac_i),
-            np.ascontiguousarray(jac_j), out,
-        )  # fmt: skip
-        return out
-
     def pairs(self, i_keys: ArrayLike, j_keys: ArrayLike) -> Floats:
         """Cross-covariance (m, d, e) of arbitrary pairs."""
         joint = self.joint(i_keys, j_keys)

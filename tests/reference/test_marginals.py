@@ -235,3 +235,49 @@ def test_stiff_but_determined_chain_is_solved():
     along = 1e-4 + 199 * sigma[0] ** 2
     # R's diagonal spans 1e9, and the recursion loses that many digits of sixteen.
     np.testing.assert_allclose(np.diagonal(end), [along, across, heading], rtol=1e-6)
+
+
+def test_variance_of_a_tight_difference_keeps_its_digits() -> None:
+    """Two variables tied by sigma 1e-4, each known to 1 by itself: redundancy in closed form.
+
+    The tie's residual variance is sigma^2 v / (sigma^2 + v) with v = 2 the difference's variance
+    without it (a product of two Gaussians), so 1 - J Sigma J' = sigma^2 / (sigma^2 + v) = 5e-9.
+    """
+    sigma = 1e-4
+    graph = gtsam.GaussianFactorGraph()
+    unit = gtsam.noiseModel.Unit.Create(2)
+    for key in (0, 1):
+        graph.add(key, np.eye(2), np.zeros(2), unit)
+    graph.add(0, np.eye(2) / sigma, 1, -np.eye(2) / sigma, np.zeros(2), unit)
+    ordering = gtsam.Ordering()
+    ordering.push_back(0)
+    ordering.push_back(1)
+    inverse = selected_inverse(graph.eliminateMultifrontal(ordering, gtsam.EliminateQR), [2, 2])
+    jacobian = np.eye(2)[None] / sigma
+    left = 1.0 - inverse.row_covariance([0], [1], jacobian, -jacobian)[0, 0, 0]
+    assert left == pytest.approx(sigma**2 / (sigma**2 + 2.0), rel=1e-5)
+
+
+def test_rows_on_pairs_equal_the_sum_of_blocks() -> None:
+    inverse = selected_inverse(*_small_tree())
+    jac_i, jac_j = np.arange(6.0).reshape(1, 2, 3), np.arange(6.0, 0.0, -1.0).reshape(1, 2, 3)
+    blocks = (
+        jac_i @ inverse.diagonal([0]) @ jac_i.swapaxes(1, 2)
+        + jac_j @ inverse.diagonal([1]) @ jac_j.swapaxes(1, 2)
+        + jac_i @ inverse.pairs([0], [1]) @ jac_j.swapaxes(1, 2)
+        + jac_j @ inverse.pairs([1], [0]) @ jac_i.swapaxes(1, 2)
+    )
+    assert np.allclose(inverse.row_covariance([0], [1], jac_i, jac_j), blocks, rtol=1e-9)
+
+
+def _small_tree() -> tuple[gtsam.GaussianBayesTree, list[int]]:
+    rng = np.random.default_rng(5)
+    graph = gtsam.GaussianFactorGraph()
+    unit = gtsam.noiseModel.Unit.Create(3)
+    for a, b in ((0, 1), (1, 2), (2, 3), (3, 0), (1, 3)):
+        graph.add(a, rng.normal(size=(3, 3)), b, rng.normal(size=(3, 3)), np.zeros(3), unit)
+    graph.add(3, np.eye(3), np.zeros(3), unit)
+    ordering = gtsam.Ordering()
+    for key in (0, 2, 1, 3):
+        ordering.push_back(key)
+    return graph.eliminateMultifrontal(ordering), [3, 3, 3, 3]
