@@ -73,6 +73,8 @@ SETTLED_ROUGHLY = 1.2
 CALIBRATED, CALIBRATED_CHAINED = 1e-3, 0.02
 #: Relative decrease of the objective at which a solve inside a loop stops, and the last ones.
 COARSE, FINE = 1e-5, 1e-9
+#: Changes of mind after which an association is left unresolved.
+RESTLESS = 4
 #: Probability that a good row agrees with the others of its spell.
 STRAY_GATE = 1.0 - 1e-6
 #: Kinds whose rows may return by what the others predict. Not sightings: of a landmark that little
@@ -106,6 +108,7 @@ class _Run:
     settled: bool = True
     stray: list[Bools] | None = None
     back: list[Bools] | None = None
+    flips: NDArray[np.int64] | None = None
     constants: Constants | None = None
     returned: list[Bools] | None = None
     notes: list[str] = field(default_factory=list)
@@ -450,9 +453,24 @@ def _review(run: _Run, system: System, quality: Quality) -> bool:
     run.review = review(
         run.problem.tracks, run.decisions.accepted, evidence, run.settings.gate_association
     )
+    _settle_flips(run, run.review)
+    changed = bool((run.review.accepted != run.decisions.accepted).any())
     run.decisions = replace(run.decisions, accepted=run.review.accepted)
     _place_shared(run)
-    return run.review.changed
+    return changed
+
+
+def _settle_flips(run: _Run, found: Review) -> None:
+    """A name that comes and goes with each review is one that nothing can tell: it stays out."""
+    if run.flips is None:
+        run.flips = np.zeros(len(found.accepted), dtype=np.int64)
+    run.flips += found.accepted != run.decisions.accepted
+    restless = (run.flips >= RESTLESS) & ~run.problem.tracks.forced
+    run.review = replace(
+        found,
+        accepted=found.accepted & ~restless,
+        unresolved=found.unresolved | (restless & found.accepted),
+    )
 
 
 def _place_shared(run: _Run) -> None:

@@ -66,8 +66,7 @@ def judged(folder: Path, reference) -> Outcome:
     table = reference.associations.merge(
         truth.rename(columns={"landmark": "is"}), on=["robot", "label"]
     )
-    effective = _contradicted(table, _landmarks(folder))
-    wrong, right = table["wrong"] & effective, ~table["wrong"]
+    wrong, right = _contradicted(table), ~table["wrong"] & ~_outvoted(table)
     rejected = table["verdict"] == "rejected"
     return Outcome(
         status=reference.status,
@@ -80,23 +79,30 @@ def judged(folder: Path, reference) -> Outcome:
     )
 
 
-def _landmarks(folder: Path) -> pd.DataFrame:
-    return pd.read_csv(folder / "truth" / "landmarks.csv").set_index("landmark")
+def _contradicted(table: pd.DataFrame) -> np.ndarray:
+    """Wrong claims that at least as many robots contradict as agree with them.
 
-
-def _contradicted(table: pd.DataFrame, plates: pd.DataFrame) -> np.ndarray:
-    """Wrong claims that a right claim of another robot on the same landmark contradicts.
-
-    Plates are metres apart and placed to centimetres, so every such claim exceeds its minimal
-    detectable bias; a claim that nobody contradicts has no effect and no bias to detect.
+    Plates are metres apart and placed to centimetres, so every contradicted claim exceeds its
+    minimal detectable bias. Where more robots give a plate the same wrong name than know it by its
+    right one, the geometry is right and the name is a matter of votes: no bias to detect. Neither
+    has a claim that nobody contradicts.
     """
-    right = table[~table["wrong"]].groupby("landmark")["robot"].agg(set)
-    return np.array(
-        [
-            bool(right.get(row.landmark, set()) - {row.robot}) if row.wrong else False
-            for row in table.itertuples()
-        ]
-    )
+    agree = table.groupby(["landmark", "is"])["robot"].transform("nunique")
+    right = _right_robots(table)
+    return (table["wrong"] & (right > 0) & (right >= agree)).to_numpy()
+
+
+def _outvoted(table: pd.DataFrame) -> np.ndarray:
+    """Right claims whose name more robots give, together, to one other plate."""
+    wrong = table[table["wrong"]].groupby(["landmark", "is"])["robot"].nunique()
+    most = wrong.groupby("landmark").max() if len(wrong) else pd.Series(dtype=float)
+    against = table["landmark"].map(most).fillna(0)
+    return (~table["wrong"] & (against > _right_robots(table))).to_numpy()
+
+
+def _right_robots(table: pd.DataFrame) -> pd.Series:
+    count = table[~table["wrong"]].groupby("landmark")["robot"].nunique()
+    return table["landmark"].map(count).fillna(0)
 
 
 def path_rmse(folder: Path, reference) -> float:
