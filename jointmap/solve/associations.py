@@ -263,7 +263,9 @@ def _settle(
     asking = np.bincount(tracks.claim[claimed], minlength=len(evidence.component))
     order = np.argsort(tracks.claim, kind="stable")
     start = np.searchsorted(tracks.claim[order], np.arange(len(held) + 1))
-    for landmark in np.flatnonzero((held == 0) & (asking > 0) | (held == 1) & (asking > 1)):
+    # Those who hold a name keep it against fewer claims than they are themselves.
+    open_names = (asking > 0) & ((held == 0) | ((asking > 1) & (asking - held >= held)))
+    for landmark in np.flatnonzero(open_names):
         mine = order[start[landmark] : start[landmark + 1]]
         mine = mine[claimed[mine]]
         i, j = np.triu_indices(len(mine), 1)
@@ -275,12 +277,14 @@ def _settle(
         free = alternative[mine] < 0
         # Agreement counts first, then a label that does not sit on another landmark.
         rank = np.lexsort((-tracks.n_sightings[mine], ~free, firmly, -size))
-        if size[rank[0]] > 1 or len(mine) == 1:
-            group = agree[rank[0]]
+        group = agree[rank[0]]
+        rivals = ~group & (size == size[rank[0]])
+        if len(mine) == 1 or (size[rank[0]] > 1 and not (rivals & ~firmly).any()):
+            pass
         elif free.sum() == 1 and firmly.sum() == len(mine) - 1:
             group = free
         else:
-            # One against one: nothing tells whose label is right, so the name goes to neither.
+            # As many against as many: nothing tells whose label is right, the name goes to none.
             group = np.zeros(len(mine), dtype=bool)
             unresolved[mine[~firmly]] = True
         out[mine] = group

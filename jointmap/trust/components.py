@@ -22,6 +22,7 @@ from jointmap.graph.noise import (
     Noise,
     NoiseTerm,
     TermKey,
+    block_covariance,
     term_shapes,
     whitening,
     with_value,
@@ -65,12 +66,33 @@ def update_noise(
 def update_motion_noise(
     problem: Problem, noise: Noise, system: System, quality: Quality
 ) -> tuple[Noise, float]:
-    """One update of every free term that is not of sightings: odometry, fixes, closures."""
+    """One update of every free term that is not of sightings: odometry, fixes, closures.
+
+    Returns the noise and the largest change of a block's typical sigma. Not of a single term: two
+    that look alike on the path of a robot can trade places for ever without changing anything.
+    """
     sums: dict[TermKey, Sides] = {}
     for part, stats in zip(system.parts, quality.parts, strict=True):
         if part.block.kind not in BURSTY:
             _add(sums, problem, noise, part, stats)
-    return solved(sums, noise)
+    made, _ = solved(sums, noise)
+    changes = [
+        _typical_change(problem, noise, made, part)
+        for part in system.parts
+        if part.block.kind not in BURSTY
+    ]
+    return made, max(changes, default=1.0)
+
+
+def _typical_change(problem: Problem, before: Noise, after: Noise, part: Part) -> float:
+    """Largest ratio of sigmas, at least 1, over the components; the median over a part's rows."""
+    old, new = (
+        np.einsum("nii->ni", block_covariance(part.block, problem, noise))
+        for noise in (before, after)
+    )
+    good = (old > 0) & (new > 0)
+    ratio = np.log(np.where(good, new, 1.0) / np.where(good, old, 1.0))
+    return float(np.exp(0.5 * np.abs(np.median(ratio, axis=0)).max(initial=0.0)))
 
 
 def _scaled_by_median(problem: Problem, noise: Noise, system: System, quality: Quality) -> Noise:
