@@ -74,7 +74,7 @@ def _block_frame(
 ) -> pd.DataFrame:
     problem = outcome.problem
     dimension = problem.dimension
-    covariance = block_covariance(block, problem, outcome.noise)
+    covariance = block_covariance(block, problem, outcome.noise, single=True)
     residual = _residuals(outcome, block)
     whitened = np.einsum("nij,nj->ni", whitening(covariance), residual)
     columns = _component_columns(block, dimension, residual, covariance)
