@@ -36,6 +36,8 @@ _SCALE_LEAST = 8
 #: Up to this scale the noise model explains the associations; beyond, their statistics are taken to
 #: have the tails of Student's distribution with so many degrees of freedom (common practice).
 _WELL_MODELLED, _STUDENT_DOF = 1.5, 6.0
+#: Associations beyond which the gate tightens in proportion to their number.
+MANY = 100
 #: A rejected track returns only when it agrees better than this share of the limit, so that one on
 #: the edge does not come and go.
 _RETURN_SHARE = 0.5
@@ -95,6 +97,8 @@ def review(tracks: Tracks, accepted: Bools, evidence: Evidence, gate: float) -> 
     n = len(tracks.robot)
     dim = evidence.positions.shape[1]
     scale = _common_scale(evidence, dim)
+    # Of thousands of right associations a fixed gate would reject some in every survey (Bonferroni).
+    gate = 1.0 - (1.0 - gate) * min(1.0, MANY / max(len(evidence.linked), 1))
     limit = _limit(gate, dim, scale)
     statistic = np.full(n, np.nan)
     tested = evidence.dof >= dim
