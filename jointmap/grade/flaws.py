@@ -26,8 +26,12 @@ TURNED_RAD = 0.2
 JUMP_DEVIATIONS, JUMP_M = 12.0, 0.5
 #: An estimate has diverged when its error stays above this many times the median for the rest.
 DIVERGED = 8.0
-#: Mean normalised squares per degree of freedom outside of this are absurd.
-ABSURD = (0.02, 50.0)
+#: Mean normalised squares per degree of freedom outside of this are odd enough to try other orders.
+ODD = (0.02, 50.0)
+#: Outside of this they are absurd, whatever the order.
+ABSURD = (1e-3, 1e3)
+#: Least share of the errors along the way that an offset in time has to explain.
+EXPLAINED = 0.3
 
 
 @dataclass(frozen=True)
@@ -160,12 +164,13 @@ def _late(
     along = (place * velocity).sum(axis=1)
     dt = float(along.sum()) / square
     rest = along - dt * (velocity**2).sum(axis=1)
-    n_eff = effective_size(rest)
+    n_eff = effective_size(along)
     sd = float(rest.std() * len(rest) / np.sqrt(n_eff)) / square
     speed = float(np.sqrt(square / len(rows)))
-    if abs(dt) < max(4.0 * sd, 0.05) or abs(dt) * speed < 0.25 * float(
-        np.sqrt((place**2).sum(1).mean())
-    ):
+    explained = 1.0 - float(((place - dt * velocity) ** 2).sum()) / max(
+        float((place**2).sum()), 1e-300
+    )
+    if abs(dt) < max(5.0 * sd, 0.05) or explained < EXPLAINED or n_eff < 10:
         return "", ""
     # A positive error along the way: the pose stands where the robot is dt later.
     return "clock", (
@@ -178,7 +183,7 @@ def covariance_flaws(
     estimate: OnlineEstimate, matched: Matched, basis: Basis | None, factor: float, stage: Stage
 ) -> list[Flaw]:
     """Covariance about other axes than declared: absurd as it stands, sensible the other way."""
-    if basis is None or not np.isfinite(factor) or ABSURD[0] < factor < ABSURD[1]:
+    if basis is None or not np.isfinite(factor) or ODD[0] < factor < ODD[1]:
         return []
     g = stage.group
     pose = matched.estimate[basis.rows]
@@ -193,7 +198,7 @@ def covariance_flaws(
             )
             out.append(Flaw(estimate.name, "", "covariance", text))
             break
-    else:
+    if not out and not ABSURD[0] < factor < ABSURD[1]:
         text = f"its covariance is absurd (factor {factor:.3g}); check its order, axes and units"
         out.append(Flaw(estimate.name, "", "covariance", text))
     return out

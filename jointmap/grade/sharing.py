@@ -63,13 +63,13 @@ def sharing_of(stage: Stage, window_s: float) -> Sharing:
     seen = used[used["kind"] == "sighting"]
     robot = seen["robot"].map(number).to_numpy(dtype=np.float64)
     known = np.isfinite(robot) & seen["landmark"].notna().to_numpy()
-    robot = np.asarray(robot[known], dtype=np.int64)
+    owner = np.asarray(robot[known], dtype=np.int64)
     t_s = seen["t_s"].to_numpy(dtype=np.float64)[known]
     names, landmark = np.unique(
         seen["landmark"].to_numpy(dtype=object)[known].astype(str), return_inverse=True
     )
     number_of = np.asarray(landmark, dtype=np.int64)
-    now, earlier = _ties(robot, t_s, number_of, len(names), window_s)
+    now, earlier = _ties(owner, t_s, number_of, len(names), window_s)
     met = used[used["kind"] == "encounter"]
     a = met["robot"].map(number).to_numpy(dtype=np.float64)
     b = met["target"].map(number).to_numpy(dtype=np.float64)
@@ -84,7 +84,7 @@ def sharing_of(stage: Stage, window_s: float) -> Sharing:
         at = stage.instants_s[stage.instant[mine]]
         meetings = np.sort(met_s[(pair == r).any(axis=0)])
         encounters[r] = len(meetings)
-        own = robot == r
+        own = owner == r
         now_s = np.sort(np.concatenate([t_s[own & now], meetings]))
         any_s = np.sort(np.concatenate([t_s[own & (now | earlier)], meetings]))
         state[mine[_within(any_s, at, window_s)]] = EARLIER

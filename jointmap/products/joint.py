@@ -46,6 +46,8 @@ NEEDED = (
     "keyframe_first", "robots", "key_of_landmark", "dims", "track_robot", "track_label",
     "landmark_name",
 )  # fmt: skip
+#: Pairs for which one column of the covariance matrix is cheaper than a path for each.
+COLUMN_PAIRS = 30
 #: A stamp this close to a keyframe is the keyframe (float64 epoch seconds resolve 0.24 us).
 SLACK_S = 2e-6
 
@@ -340,13 +342,31 @@ class JointState:
             if near.any():
                 made[near] = self.inverse.pairs(one[near], two[near])
             if not near.all():
-                # The column of the commoner side is kept while the other runs.
-                p, q = one[~near], two[~near]
-                flip = len(np.unique(q)) < len(np.unique(p))
-                far = self.factor.pairs(q, p) if flip else self.factor.pairs(p, q)
-                made[~near] = np.swapaxes(far, 1, 2) if flip else far
+                made[~near] = self._far_pairs(one[~near], two[~near])
             out[joined] = self._datum(one, two, made)
         return np.asarray(out[back])
+
+    def _far_pairs(self, i: Ints, j: Ints) -> Floats:
+        """Cross-covariance of keyframes that share no clique.
+
+        Where one side has few keys, their columns of Sigma come from one solve each, which costs
+        less than paths through the tree for every pair.
+        """
+        flip = len(np.unique(j)) < len(np.unique(i))
+        p, q = (j, i) if flip else (i, j)
+        few, back = np.unique(p, return_inverse=True)
+        if len(few) * COLUMN_PAIRS < len(p):
+            dof = self.group.dof
+            unit = np.zeros((self.factor.tree.n_scalars, len(few) * dof))
+            rows = self.offset[few][:, None] + np.arange(dof)
+            unit[rows.ravel(), np.arange(len(few) * dof)] = 1.0
+            columns = self.factor.solve(unit).reshape(-1, len(few), dof)
+            at = self.offset[q][:, None] + np.arange(dof)
+            # Rows of the other key, columns of the few: its transpose is the pair's block.
+            far = np.swapaxes(columns[at, back[:, None]], 1, 2)
+        else:
+            far = self.factor.pairs(p, q)
+        return np.asarray(np.swapaxes(far, 1, 2) if flip else far)
 
     def _blocks(self, keys: Ints, landmarks: Ints, robot: Ints) -> Floats:
         cov = self._datum(keys, landmarks, self.factor.pairs(keys, landmarks))

@@ -114,3 +114,15 @@ def test_draws_have_the_factors_covariance(small):
     root = draw(factor, np.eye(factor.tree.n_scalars))
     covariance = factor.solve(np.eye(factor.tree.n_scalars))
     np.testing.assert_allclose(root @ root.T, covariance, rtol=0, atol=1e-10 * covariance.max())
+
+
+def test_many_pairs_by_columns_equal_pairs_by_paths(small):
+    """Both ways to a cross-covariance: one solve per column, one path per pair."""
+    _, case = small
+    joint = case.reference.joint
+    first = joint.locate("heron", np.full(60, 0.5))
+    others = joint.locate("otter", np.linspace(0.0, 29.0, 60))
+    many = joint.cross_covariance(first, others)
+    for k in (0, 17, 59):
+        one = joint.cross_covariance(first.take([k]), others.take([k]))[0]
+        np.testing.assert_allclose(many[k], one, rtol=0, atol=1e-9 * np.abs(one).max())

@@ -83,9 +83,7 @@ def cases_of(folder: Path, reference, settings: GradeSettings, card=None):
                 )  # fmt: skip
         chosen, reference_only = true.take(checked), matched.take(checked)
         for segments in by_length(stage, reference_only):
-            made_r = relative_errors(
-                stage, chosen.take(segments.start), chosen.take(segments.end)
-            )
+            made_r = relative_errors(stage, chosen.take(segments.start), chosen.take(segments.end))
             value = float(np.sqrt((made_r.place**2).sum(axis=1).mean()))
             for s in card.scores:
                 if (s.quantity, s.over, s.size, s.robot) == (
@@ -107,6 +105,14 @@ def cases_of(folder: Path, reference, settings: GradeSettings, card=None):
             part = aligned(m.take(np.searchsorted(m.row, rows)), stage, c.alignment)
             roots.append(float(np.sqrt((part.place**2).sum(axis=1).mean())))
         verdicts.append(
-            Case(f"{c.a}|{c.b}", "difference", c.value, c.value, c.lower, c.upper, roots[0] - roots[1])
+            Case(
+                f"{c.a}|{c.b}",
+                "difference",
+                c.value,
+                c.value,
+                c.lower,
+                c.upper,
+                roots[0] - roots[1],
+            )
         )
     return cases, verdicts, run
