@@ -137,15 +137,15 @@ class Projection:
         if not self.motions.shape[2]:
             return np.zeros((*errors.shape[:-2], 0))
         q = len(self.gain)
-        flat = errors.reshape(*errors.shape[:-2], -1)
-        return np.asarray(flat @ self.gain.reshape(q, -1).T)
+        flat = errors.reshape(*errors.shape[:-2], errors.shape[-2] * errors.shape[-1])
+        return np.asarray(flat @ self.gain.reshape(q, -1).T.astype(errors.dtype))
 
     def remove(self, errors: Floats, fitted: Floats) -> Floats:
         """Errors (..., n, d) without the fitted motion."""
         if not self.motions.shape[2]:
             return errors
         n, d, q = self.motions.shape
-        moved = fitted @ self.motions.reshape(n * d, q).T
+        moved = fitted @ self.motions.reshape(n * d, q).T.astype(errors.dtype)
         return np.asarray(errors - moved.reshape(errors.shape))
 
 

@@ -89,20 +89,33 @@ def mode_of(estimate: OnlineEstimate, stage: Stage, settings: GradeSettings) -> 
     return "team", "the reference is not tied to the site frame, so that frame is aligned"
 
 
-def aligned(matched: Matched, stage: Stage, mode: str, *, scale: bool = False) -> Aligned:
-    """Align the rows of an estimator and take its errors."""
+def aligned(
+    matched: Matched,
+    stage: Stage,
+    mode: str,
+    *,
+    scale: bool = False,
+    equal: bool = False,
+    draws: bool = True,
+) -> Aligned:
+    """Align the rows of an estimator and take its errors.
+
+    ``equal`` weighs all rows alike, so that the reference's draws are the same for every estimator
+    with these rows; ``draws=False`` leaves them out.
+    """
     g, n = stage.group, len(matched)
     dof = 0 if mode == "none" else alignment_dof(g.dim, stage.gravity_aligned)
-    floor = stage.floor()[matched.row] / g.dim
+    floor = stage.floor[matched.row] / g.dim
     pose = matched.estimate.copy()
     turn_size = 1 if g.dim == 2 else 3
-    place_draws = stage.place[:, matched.row]
-    turn_draws = stage.turn[:, matched.row]
+    drawn = slice(None) if draws else slice(0, 0)
+    place_draws = stage.place[drawn, matched.row]
+    turn_draws = stage.turn[drawn, matched.row]
     lost = np.zeros(n, dtype=bool)
     blocks = []
     for label, rows in _groups(matched, stage, mode):
         x, y = g.translation(matched.estimate[rows]), g.translation(matched.reference[rows])
-        transform, weight = _fit(x, y, floor[rows], dof, scale)
+        transform, weight = _fit(x, y, floor[rows], dof, scale, 1 if equal else ROUNDS)
         if transform is None:
             lost[rows] = True
             continue
@@ -136,21 +149,22 @@ def _groups(matched: Matched, stage: Stage, mode: str) -> list[tuple[str, Ints]]
 
 
 def _fit(
-    x: Floats, y: Floats, floor: Floats, dof: int, scale: bool
+    x: Floats, y: Floats, floor: Floats, dof: int, scale: bool, rounds: int
 ) -> tuple[Transform | None, Floats]:
     """Transform and weights: inverse variances of the reference plus the errors' own."""
     weight = np.ones(len(x))
     if dof == 0:
         return identity(x.shape[1]), weight
-    transform = None
-    for _ in range(ROUNDS):
+    transform, fresh = None, weight
+    for _ in range(rounds):
+        weight = fresh
         transform = align(x, y, weight, dof, scale=scale)
         if transform is None:
             return None, weight
         residual = float(((transform.points(x) - y) ** 2).mean())
         # The estimate's errors are taken as equal: what it claims of them is what is on trial.
-        weight = 1.0 / np.maximum(floor + residual, 1e-12)
-        weight /= weight.mean()
+        fresh = 1.0 / np.maximum(floor + residual, 1e-12)
+        fresh /= fresh.mean()
     return transform, weight
 
 

@@ -10,7 +10,7 @@ the first excludes zero, and called repeatable when the second does as well.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from itertools import combinations
 from typing import Any
 
@@ -21,7 +21,7 @@ from scipy.stats import wilcoxon
 from jointmap.grade.aligned import Aligned, aligned
 from jointmap.grade.figures import Figure, difference, figure, grade
 from jointmap.grade.match import Matched
-from jointmap.grade.relative import by_length, relative_errors
+from jointmap.grade.relative import Segments, by_length, relative_errors
 from jointmap.grade.series import block_length, block_means
 from jointmap.grade.settings import GradeSettings
 from jointmap.grade.stage import Stage
@@ -76,6 +76,7 @@ def compare(
 ) -> list[Comparison]:
     """All pairs."""
     cache: dict[tuple[Any, ...], Aligned] = {}
+    segments: dict[tuple[Any, ...], list[Segments]] = {}
     out = []
     for a, b in combinations(entries, 2):
         mode = common_mode((a.mode, b.mode))
@@ -83,7 +84,8 @@ def compare(
         if len(rows) < 20:
             continue
         support = len(rows) / max(len(a.matched), len(b.matched))
-        one, two = (_aligned_on(e, rows, mode, stage, settings, cache) for e in (a, b))
+        one = _aligned_on(a, rows, mode, stage, settings, cache, draws=True)
+        two = _aligned_on(b, rows, mode, stage, settings, cache, draws=False)
         good = ~(one.unaligned | two.unaligned)
         instant = stage.instant[rows]
         for quantity, turn in (("position", False), ("heading", True)):
@@ -93,7 +95,7 @@ def compare(
                 _pair(a, b, quantity, "", 0.0, errors, draws, instant[good], support, mode,
                       settings, log_scale)
             )  # fmt: skip
-        out += _relative(a, b, rows, support, stage, settings, log_scale)
+        out += _relative(a, b, rows, support, stage, settings, log_scale, segments)
     return out
 
 
@@ -109,15 +111,23 @@ def _aligned_on(
     stage: Stage,
     settings: GradeSettings,
     cache: dict[tuple[Any, ...], Aligned],
+    *,
+    draws: bool,
 ) -> Aligned:
-    key = (entry.name, mode, len(rows), rows.tobytes())
+    """The alignment with equal weights: its draws are those of every estimator with these rows."""
+    support = (mode, rows.tobytes())
+    key = (entry.name if not draws else "", *support)
     if key not in cache:
+        # Draws of many rows are large: only the latest support is kept.
+        for old in [k for k in cache if k[1:] != support]:
+            del cache[old]
         chosen = entry.matched.take(np.searchsorted(entry.matched.row, rows))
-        # Only the latest supports are kept: draws of many rows are large.
-        if len(cache) > 4:
-            cache.pop(next(iter(cache)))
-        cache[key] = aligned(chosen, stage, mode, scale=settings.scale)
-    return cache[key]
+        cache[key] = aligned(chosen, stage, mode, scale=settings.scale, equal=True, draws=draws)
+    found = cache[key]
+    if not draws or found.matched.name == entry.name:
+        return found
+    own = _aligned_on(entry, rows, mode, stage, settings, cache, draws=False)
+    return replace(own, place_draws=found.place_draws, turn_draws=found.turn_draws)
 
 
 def _relative(
@@ -128,10 +138,15 @@ def _relative(
     stage: Stage,
     settings: GradeSettings,
     log_scale: Floats,
+    cache: dict[tuple[Any, ...], list[Segments]],
 ) -> list[Comparison]:
     """Relative errors over the middle one of the lengths."""
     one, two = (e.matched.take(np.searchsorted(e.matched.row, rows)) for e in (a, b))
-    lengths = by_length(stage, one)
+    key = (rows.tobytes(),)
+    if key not in cache:
+        cache.clear()
+        cache[key] = by_length(stage, one)
+    lengths = cache[key]
     if not lengths:
         return []
     segments = lengths[len(lengths) // 2]
@@ -273,7 +288,7 @@ def order_of_finish(
     roots = {}
     for e in known:
         chosen = e.matched.take(np.searchsorted(e.matched.row, rows))
-        made = aligned(chosen, stage, mode, scale=settings.scale)
+        made = aligned(chosen, stage, mode, scale=settings.scale, equal=True)
         good = ~made.unaligned
         roots[e.name] = np.sqrt(
             figure(made.place[good], made.place_draws[:, good], e.case).values(log_scale)

@@ -14,7 +14,9 @@ poses: the band is that of chi-square with the effective number of values in tim
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,6 +24,7 @@ from scipy.stats import chi2
 
 from jointmap.grade.aligned import Aligned
 from jointmap.grade.cases import difference_covariance, least_ratio, normalised_square
+from jointmap.grade.kernels import relative_draws, turned_draws
 from jointmap.grade.match import Matched
 from jointmap.grade.online import OnlineEstimate
 from jointmap.grade.series import block_length, block_means, effective_size
@@ -137,12 +140,11 @@ def _anchored(matched: Matched, anchors: Ints, stage: Stage) -> Basis:
     # compared at the estimate's stamp, the covariance is that of the instant.
     own = g.between(start.reference, end.reference)
     error = g.local(own, g.between(start.estimate, end.estimate))
-    e = stage.posterior.errors
     back = g.adjoint(g.inverse(own))
-    f = e[:, end.row] - np.matmul(back[None], e[:, start.row][..., None])[..., 0]
+    f = relative_draws(stage.posterior.errors, start.row, end.row, back)
     # log(exp(f) exp(xi)) = xi + J_l^-1(xi) f
     left = g.right_jacobian_inverse(-error)
-    draws = np.matmul(left[None], f[..., None])[..., 0]
+    draws = turned_draws(left, f)
     carried = left @ reference @ np.swapaxes(left, 1, 2)
     return Basis(
         rows, error, end.cov, carried, draws, "relative to the exact first pose of its frame", 0
@@ -155,7 +157,7 @@ def _absolute(matched: Matched, claimed: Bools, stage: Stage) -> Basis:
     g = stage.group
     error = g.local(chosen.reference, chosen.estimate)
     left = g.right_jacobian_inverse(-error)
-    draws = np.matmul(left[None], stage.posterior.errors[:, chosen.row][..., None])[..., 0]
+    draws = turned_draws(left, stage.posterior.errors, chosen.row)
     reference = left @ stage.located.cov[chosen.row] @ np.swapaxes(left, 1, 2)
     return Basis(rows, error, chosen.cov, reference, draws, "in the site frame", 0)
 
@@ -166,15 +168,15 @@ def _after_alignment(matched: Matched, made: Aligned, claimed: Bools, stage: Sta
     g = stage.group
     turn = np.swapaxes(g.rotation(matched.reference[rows]), 1, 2)
     place = np.einsum("nij,nj->ni", turn, made.place[rows])
-    place_draws = np.einsum("nij,snj->sni", turn, made.place_draws[:, rows])
+    place_draws = turned_draws(turn, made.place_draws, rows)
     if g.dim == 2:
         error = np.concatenate([place, made.turn[rows]], axis=1)
         draws = np.concatenate([place_draws, made.turn_draws[:, rows]], axis=2)
     else:
         turned = np.einsum("nij,nj->ni", turn, made.turn[rows])
-        turned_draws = np.einsum("nij,snj->sni", turn, made.turn_draws[:, rows])
+        turned_by = turned_draws(turn, made.turn_draws, rows)
         error = np.concatenate([turned, place], axis=1)
-        draws = np.concatenate([turned_draws, place_draws], axis=2)
+        draws = np.concatenate([turned_by, place_draws], axis=2)
     reference = np.einsum("sni,snj->nij", draws, draws) / len(draws)
     return Basis(
         rows, error, matched.cov[rows], reference, draws,
@@ -186,15 +188,24 @@ def scale_bounds(stage: Stage, settings: GradeSettings) -> tuple[float, float]:
     """How far the reference's own variances may be too large or too small.
 
     Two standard deviations of the setting either way. Where the residuals of the reference are
-    smaller than its noise model (chi-square under its degrees of freedom) its covariance may be
-    enlarged by as much, and where they are larger it may be too small.
+    smaller than its noise model (chi-square under its degrees of freedom), or where its sigmas were
+    enlarged after the solution (hold-out), its covariance may be larger than that of an optimal
+    batch by as much; where residuals are larger it may be too small.
     """
     wide = 2.0 * settings.scale_sigma
     meta = stage.reference.meta
     ratio = 1.0
     if meta.get("chi2") and meta.get("dof"):
         ratio = float(meta["chi2"]) / float(meta["dof"])
-    return float(np.exp(-wide) * min(1.0, ratio)), float(np.exp(wide) * max(1.0, ratio))
+    enlarged = enlargement(meta)
+    return float(np.exp(-wide) * min(1.0, ratio) / enlarged), float(np.exp(wide) * max(1.0, ratio))
+
+
+def enlargement(meta: Mapping[str, Any]) -> float:
+    """Factor on variances, at least one, by which a reference enlarged its claims."""
+    holdout = (meta.get("evidence") or {}).get("holdout") or {}
+    factor = holdout.get("sigma_factor") if isinstance(holdout, Mapping) else None
+    return max(1.0, float(factor) ** 2) if factor else 1.0
 
 
 def judge(
@@ -221,7 +232,7 @@ def judge(
     by_case = nees / np.maximum(rank, 1)
     root, dims = _whitener(claim)
     plain = np.einsum("nij,nj->ni", root, d)
-    f = np.einsum("nij,snj->sni", root, basis.draws[:, index])
+    f = turned_draws(root, basis.draws, index)
     low_scale, high_scale = scale_bounds(stage, settings)
     factor, lower, upper, per_row = _factor(plain, f, dims, case, low_scale, high_scale, settings)
     series, grid = _by_instant(per_row, instant)
@@ -267,7 +278,7 @@ def _factor(
     weight = 1.0 / dims
     a = (d**2).sum(axis=1) * weight
     b = np.einsum("sni,sni->sn", f, f) * weight
-    x = 2.0 * np.einsum("sni,ni->sn", f, d) * weight
+    x = 2.0 * np.einsum("sni,ni->sn", f, d.astype(f.dtype)) * weight
     square, floor, cross = float(a.mean()), b.mean(axis=1), x.mean(axis=1)
     if case == "same":
         values = [square + np.sqrt(c) * cross + c * floor for c in (low, 1.0, high)]

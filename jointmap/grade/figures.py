@@ -87,7 +87,7 @@ def figure(difference: Floats, reference: Floats, case: str) -> Figure:
     step = max(1, _CHUNK_NUMBERS // max(n * k, 1))
     for lo in range(0, s, step):
         part = flat[lo : lo + step]
-        cross[lo : lo + step] = 2.0 * (part @ difference.ravel()) / n
+        cross[lo : lo + step] = 2.0 * (part @ difference.ravel().astype(part.dtype)) / n
         floor[lo : lo + step] = np.einsum("ij,ij->i", part, part) / n
     return Figure(float((difference**2).sum() / n), cross, floor, n, case)
 

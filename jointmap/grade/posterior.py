@@ -35,7 +35,7 @@ class Posterior:
     ----------
     located : Located
         The stamps.
-    errors : (S, m, dof) float
+    errors : (S, m, dof) float32
         Body tangents of the reference: a drawn truth is ``T exp(-error)``.
     landmarks : (S, L, d) float
         Errors of ``landmark_names``, map axes.
@@ -90,6 +90,8 @@ def draw_posterior(
     scale = np.sqrt(joint.scale[located.robot])
     errors *= scale[None, :, None]
     errors += _own_draws(located, half, rng)
+    # Single precision: a draw is a random number, and these arrays are the largest of a grading.
+    errors, landmarks = errors.astype(np.float32), landmarks.astype(np.float32)
     return Posterior(
         located,
         np.concatenate([errors, -errors]),
@@ -154,7 +156,7 @@ class _free_motion:  # noqa: N801 - a function with a memory
 
 def position_errors(group: frames.Group, pose: Floats, errors: Floats) -> tuple[Floats, Floats]:
     """Position (S, m, d) and rotation errors (S, m, 1 or 3) about map axes of body tangents."""
-    turn = group.rotation(pose)
+    turn = group.rotation(pose).astype(errors.dtype)
     if group.dim == 2:
         place = np.einsum("mij,smj->smi", turn, errors[..., :2])
         return np.asarray(place), errors[..., 2:]

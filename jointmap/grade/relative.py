@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from jointmap.frames import Group, skew
+from jointmap.grade.kernels import relative_draws, turned_draws
 from jointmap.grade.match import Matched
 from jointmap.grade.stage import Stage
 
@@ -65,9 +66,8 @@ def relative_errors(
     g = stage.group
     between = g.between(start.reference, end.reference)
     error = g.between(between, g.between(start.estimate, end.estimate))
-    e = stage.posterior.errors
     back = g.adjoint(g.inverse(between))
-    f = e[:, end.row] - np.matmul(back[None], e[:, start.row][..., None])[..., 0]
+    f = relative_draws(stage.posterior.errors, start.row, end.row, back)
     return _errors(g, error, f)
 
 
@@ -75,11 +75,11 @@ def _errors(g: Group, error: Floats, f: Floats) -> RelativeErrors:
     place = g.translation(error)
     xi = g.log(error)
     if g.dim == 2:
-        turned = np.stack([-place[:, 1], place[:, 0]], axis=1)
+        turned = np.stack([-place[:, 1], place[:, 0]], axis=1).astype(f.dtype)
         place_draws = f[..., :2] + f[..., 2:] * turned[None]
         return RelativeErrors(place, xi[:, 2:], place_draws, f[..., 2:])
     # w x p = -skew(p) w
-    moved = np.matmul(-skew(place)[None], f[..., :3][..., None])[..., 0]
+    moved = turned_draws(-skew(place), np.ascontiguousarray(f[..., :3]))
     return RelativeErrors(place, xi[:, :3], f[..., 3:] + moved, f[..., :3])
 
 

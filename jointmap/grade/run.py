@@ -180,7 +180,7 @@ def _reference_facts(reference: Reference, stage: Stage) -> dict[str, Any]:
         "reasons": list(meta["reasons"]),
         "datum": meta["datum"],
         "site_frame": stage.site,
-        "floor_m": float(np.sqrt(stage.floor()[trust < 2].mean())) if (trust < 2).any() else None,
+        "floor_m": float(np.sqrt(stage.floor[trust < 2].mean())) if (trust < 2).any() else None,
     }
     for code, word in enumerate(TRUST):
         facts[f"share_{word}"] = float((trust == code).mean())

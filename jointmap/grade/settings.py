@@ -56,7 +56,7 @@ class GradeSettings:
     alignment: Alignment = "auto"
     scale: bool = False
     data: Case = "declared"
-    instants: int = 1200
+    instants: int = 1000
     draws: int = 400
     bootstrap: int = 1000
     tolerance_s: float | None = None

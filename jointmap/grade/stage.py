@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -40,7 +41,7 @@ class Stage:
         Index into ``located``, -1 where the robot has no pose.
     path_m : (m,) float
         Path of the robot since its first instant.
-    place, turn : (S, m, d), (S, m, 1 or 3) float
+    place, turn : (S, m, d), (S, m, 1 or 3) float32
         Drawn errors of position and rotation, map axes.
     posterior : Posterior
     site : bool
@@ -73,9 +74,11 @@ class Stage:
         """Stamps (m,) that redundant measurements check at least weakly."""
         return self.located.trust < UNCHECKED
 
+    @cached_property
     def floor(self) -> Floats:
         """Variance (m,) of the reference's position, summed over axes, of its draws."""
-        return np.asarray((self.place**2).sum(axis=2).mean(axis=0))
+        total = np.einsum("smd,smd->m", self.place, self.place)
+        return np.asarray(total, dtype=np.float64) / len(self.place)
 
 
 def make_stage(reference: Reference, settings: GradeSettings) -> Stage:
