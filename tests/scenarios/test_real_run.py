@@ -9,23 +9,16 @@ not figures read off this run.
 from __future__ import annotations
 
 import re
-import shutil
 from pathlib import Path
 
 import numpy as np
 import pytest
 from scipy.stats import chi2
 
-import jointmap
-from jointmap.ingest.mrclam import import_mrclam
-
 
 @pytest.fixture(scope="module")
-def reference(real_run: Path, tmp_path_factory: pytest.TempPathFactory):
-    work = tmp_path_factory.mktemp("real")
-    shutil.copytree(real_run, work / "logs", ignore=shutil.ignore_patterns("*Groundtruth*"))
-    import_mrclam(work / "logs", work / "survey")
-    return jointmap.fuse(jointmap.read_survey(work / "survey"))
+def reference(real_reference):
+    return real_reference
 
 
 @pytest.fixture(scope="module")
