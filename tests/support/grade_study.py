@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import shutil
+import tempfile
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -17,7 +19,10 @@ from jointmap.grade.match import match
 from jointmap.grade.read import read_online
 from jointmap.grade.relative import by_length, relative_errors
 from jointmap.grade.stage import make_stage
-from jointmap.schema import pose_columns
+from jointmap.products.columns import pack_covariance
+from jointmap.schema import covariance_columns, pose_columns
+from jointmap.simulate.estimators.write import write_online
+from jointmap.simulate.settings import SimulationSettings
 
 
 def truth_at(folder: Path, robot: str, t_s, dimension: int):
@@ -116,3 +121,54 @@ def cases_of(folder: Path, reference, settings: GradeSettings, card=None):
             )
         )
     return cases, verdicts, run
+
+
+STUDY = GradeSettings(draws=200, instants=400, bootstrap=200)
+
+
+def planar(seed: int, folder: Path):
+    """A planar survey with the four textbook estimators."""
+    world = SimulationSettings(state_noise=True, duration_s=200.0, landmarks=40, robots=3)
+    jointmap.simulate("quarry-2d", folder, world, seed=seed)
+    survey = jointmap.read_survey(folder)
+    write_online(survey)
+    return cases_of(folder, jointmap.fuse(survey), STUDY)
+
+
+def spatial(seed: int, folder: Path):
+    """A spatial survey with two estimators that saw a part of its data: odometry, and a batch
+    solution of every second sighting.
+    """
+    world = SimulationSettings(state_noise=True, duration_s=150.0, landmarks=40, robots=3)
+    jointmap.simulate("quarry-3d", folder / "whole", world, seed=seed)
+    survey = jointmap.read_survey(folder / "whole")
+    shutil.copytree(folder / "whole", folder / "half")
+    for file in (folder / "half").glob("*/sightings.csv"):
+        pd.read_csv(file).iloc[::2].to_csv(file, index=False)
+    half = jointmap.fuse(jointmap.read_survey(folder / "half"))
+    names = list(pose_columns(3))
+    for name, frame in (("half", "team"), ("odometry", "own")):
+        home = survey.path / "online" / name
+        home.mkdir(parents=True)
+        (home / "estimator.toml").write_text(
+            f'frame = "{frame}"\ncovariance = "fixed-axes"\nevidence = "unknown"\ndata = "same"\n'
+        )
+        for robot, log in survey.robots.items():
+            if name == "odometry":
+                pose, stamps, cov = log.odometry.pose, log.odometry.t_s, None
+            else:
+                path = half.trajectories[robot]
+                pose, stamps, cov = path.pose, path.t_s, pack_covariance(path.cov)
+            table = {"t_s": stamps} | dict(zip(names, pose.T, strict=True))
+            if cov is not None:
+                table |= dict(zip(covariance_columns(3), cov.T, strict=True))
+            pd.DataFrame(table).to_csv(home / f"{robot}.csv", index=False)
+    return cases_of(folder / "whole", jointmap.fuse(survey), STUDY)
+
+
+def one_seed(kind: str, seed: int):
+    """Cases, differences and verdicts of one seed, small enough to send between processes."""
+    with tempfile.TemporaryDirectory() as name:
+        cases, gaps, run = {"planar": planar, "spatial": spatial}[kind](seed, Path(name) / "s")
+    verdicts = {e.name: v.verdict for e in run.estimators if (v := e.verdict()) is not None}
+    return cases, gaps, verdicts
